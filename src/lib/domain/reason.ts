@@ -1,0 +1,38 @@
+// Pure.
+/** Why a reading is not plainly good. The same literals stand in code, log, API and tests. */
+export const REASONS = [
+	'test-value',
+	'no-answer',
+	'no-connection',
+	'source-offline',
+	'exception-1',
+	'exception-2',
+	'exception-3',
+	'exception-4',
+	'exception-5',
+	'exception-6',
+	'exception-8',
+	'exception-10',
+	'exception-11',
+	'undecodable',
+	'node-missing',
+	'namespace-missing',
+	'path-missing',
+	'not-a-number-text',
+	'source-bad',
+	'source-uncertain',
+	'not-valid',
+	'sentinel',
+	'nan',
+	'infinite',
+	'frozen',
+	'out-of-range',
+	'source-time',
+	'precision',
+	'retained',
+	'overflow',
+	'stale',
+	'companion-missing',
+] as const;
+
+export type Reason = (typeof REASONS)[number];
