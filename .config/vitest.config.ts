@@ -8,7 +8,14 @@ export default defineConfig({
 	root,
 	test: {
 		projects: [
-			{ root, test: { name: 'unit', include: ['src/**/*.test.ts', 'tests/architecture.test.ts', 'simulators/**/*.test.ts'], environment: 'node' } },
+			{
+				root,
+				test: {
+					name: 'unit',
+					include: ['src/**/*.test.ts', 'tests/architecture.test.ts', 'simulators/**/*.test.ts'],
+					environment: 'node',
+				},
+			},
 			{
 				root,
 				test: {

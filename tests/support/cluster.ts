@@ -61,8 +61,15 @@ export async function createCluster(): Promise<Cluster> {
 	run('initdb', ['-D', folder, '-U', 'owner', '-A', 'trust', '--locale=C.UTF-8', '-E', 'UTF8', '--no-sync']);
 	const port = await freePort();
 	const settings = [
-		`port = ${port}`, "listen_addresses = '127.0.0.1'", "unix_socket_directories = ''", 'fsync = off', 'synchronous_commit = off',
-		'full_page_writes = off', 'shared_buffers = 256MB', 'max_connections = 200', 'max_wal_size = 2GB',
+		`port = ${port}`,
+		"listen_addresses = '127.0.0.1'",
+		"unix_socket_directories = ''",
+		'fsync = off',
+		'synchronous_commit = off',
+		'full_page_writes = off',
+		'shared_buffers = 256MB',
+		'max_connections = 200',
+		'max_wal_size = 2GB',
 	].join('\n');
 	writeFileSync(join(folder, 'postgresql.auto.conf'), `${settings}\n`);
 	const start = () => run('pg_ctl', ['-D', folder, '-w', '-l', join(parent, 'log'), 'start']);
@@ -99,7 +106,8 @@ let serial = 0;
 
 /** A migrated database of the test file's own; answers its address. `drop` fails while a client is still open. */
 export async function cloneDatabase(clusterUrl = process.env.TEST_CLUSTER_URL): Promise<{ url: string; drop(): Promise<void> }> {
-	if (!clusterUrl) throw new Error('TEST_CLUSTER_URL is not set: database tests run through the vitest projects that start a cluster');
+	if (!clusterUrl)
+		throw new Error('TEST_CLUSTER_URL is not set: database tests run through the vitest projects that start a cluster');
 	serial += 1;
 	const name = `t_${process.pid}_${Date.now().toString(36)}_${serial}`;
 	const admin = new pg.Client({ connectionString: `${clusterUrl}/postgres` });
