@@ -25,6 +25,8 @@ export const tags = pgTable(
 		pointId: integer('point_id').references(() => measuringPoints.id),
 		/** The published row, with `id`; null before the first publish. */
 		row: jsonb('row').$type<MapRow>(),
+		/** Revision since which unit and detector stand; readings of earlier revisions are in another unit and no answer spans both. */
+		unitRevision: integer('unit_revision').notNull().default(0),
 		/** Revision that last changed this tag. */
 		revision: integer('revision').notNull().default(0),
 		publishedAt: at('published_at'),

@@ -1,0 +1,1 @@
+ALTER TABLE "tags" ADD COLUMN "unit_revision" integer DEFAULT 0 NOT NULL;
