@@ -12,6 +12,7 @@ const at = (permission: Permission): RouteRule => ({ permission });
 /** Every route there is, by Kit's route id. A route that is not here is refused. */
 export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
 	'/': 'signed-in',
+	'/(app)': 'signed-in',
 	'/(public)/sign-in': 'public',
 	'/(public)/sign-out': 'public',
 	'/(public)/invite/[token]': 'public',
@@ -20,6 +21,8 @@ export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
 
 	'/(app)/account': 'signed-in',
 	'/(app)/[site]': at('site:read'),
+	'/(app)/[site]/pulse': at('site:read'),
+	'/(app)/[site]/keys': at('keys:edit'),
 	'/(app)/[site]/machines': at('site:read'),
 	'/(app)/[site]/machines/[id]': at('site:read'),
 	'/(app)/[site]/tags': at('site:read'),
@@ -34,6 +37,7 @@ export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
 	'/(app)/[site]/feeds': at('site:read'),
 	'/(app)/[site]/audit': at('audit:read'),
 	'/(app)/admin/people': at('people:edit'),
+	'/(app)/admin/mails': at('mail:edit'),
 	'/(app)/admin/keys': at('people:edit'),
 	'/(app)/admin/sites': at('sites:edit'),
 
