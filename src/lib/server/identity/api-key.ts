@@ -136,13 +136,13 @@ export async function listKeys(db: Db, siteId?: number): Promise<KeyRow[]> {
 			createdAt: apiKeys.createdAt,
 			sites: sql<
 				string[]
-			>`array(select s.slug from api_key_sites ks join sites s on s.id = ks.site_id where ks.key_id = ${apiKeys.id} order by 1)`,
+			>`array(select s.slug from api_key_sites ks join sites s on s.id = ks.site_id where ks.key_id = "api_keys"."id" order by 1)`,
 		})
 		.from(apiKeys)
 		.where(
 			siteId === undefined
 				? undefined
-				: sql`exists (select from api_key_sites ks where ks.key_id = ${apiKeys.id} and ks.site_id = ${siteId})`,
+				: sql`exists (select from api_key_sites ks where ks.key_id = "api_keys"."id" and ks.site_id = ${siteId})`,
 		)
 		.orderBy(sql`${apiKeys.revokedAt} is not null`, asc(sql`lower(${apiKeys.name})`));
 	return rows.map((row) => ({ ...row, scopes: row.scopes as KeyScope[] }));
@@ -159,7 +159,7 @@ export async function findKeyActor(db: Db, key: string, ip: string): Promise<Ext
 			isUseOld: sql<boolean>`${apiKeys.lastUsedAt} is null or ${apiKeys.lastUsedAt} < now() - interval '1 minute'`,
 			sites: sql<
 				string[]
-			>`array(select s.slug from api_key_sites ks join sites s on s.id = ks.site_id where ks.key_id = ${apiKeys.id})`,
+			>`array(select s.slug from api_key_sites ks join sites s on s.id = ks.site_id where ks.key_id = "api_keys"."id")`,
 		})
 		.from(apiKeys)
 		.where(

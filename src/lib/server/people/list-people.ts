@@ -30,7 +30,7 @@ export async function listPeople(db: Db): Promise<PersonRow[]> {
 			hasPassword: sql<boolean>`${users.passwordHash} is not null`,
 			disabledAt: users.disabledAt,
 			createdAt: users.createdAt,
-			lastSignInAt: sql<Date | null>`(select max(created_at) from sessions where sessions.user_id = ${users.id})`.mapWith(
+			lastSignInAt: sql<Date | null>`(select max(created_at) from sessions where sessions.user_id = "users"."id")`.mapWith(
 				(value: string | Date) => new Date(value),
 			),
 		})
