@@ -41,8 +41,10 @@ export const limitSchema = z
 	})
 	.superRefine((limit, ctx) => {
 		const missing = (path: string, message: string) => ctx.addIssue({ code: 'custom', path: [path], message });
-		if (['high', 'low', 'rate', 'deviation'].includes(limit.kind) && limit.value == null) missing('value', `a ${limit.kind} limit needs a value`);
-		if (limit.kind === 'rate' && !(limit.window_s != null && limit.window_s > 0)) missing('window_s', 'a rate limit needs a window above 0 s');
+		if (['high', 'low', 'rate', 'deviation'].includes(limit.kind) && limit.value == null)
+			missing('value', `a ${limit.kind} limit needs a value`);
+		if (limit.kind === 'rate' && !(limit.window_s != null && limit.window_s > 0))
+			missing('window_s', 'a rate limit needs a window above 0 s');
 		if (limit.kind === 'deviation' && limit.baseline == null) missing('baseline', 'a deviation limit needs a baseline');
 		if (limit.kind === 'state' && limit.state == null) missing('state', 'a state limit needs the state that is the alarm');
 		if (limit.level === 'danger') {

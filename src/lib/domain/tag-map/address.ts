@@ -16,7 +16,17 @@ export interface ModbusAddress {
 }
 export const MODBUS_TABLES = ['coil', 'discrete-input', 'input-register', 'holding-register'] as const;
 export const MODBUS_DATA_TYPES = [
-	'bool', 'int16', 'uint16', 'int32', 'uint32', 'int64', 'uint64', 'float32', 'float64', 'bcd16', 'bcd32',
+	'bool',
+	'int16',
+	'uint16',
+	'int32',
+	'uint32',
+	'int64',
+	'uint64',
+	'float32',
+	'float64',
+	'bcd16',
+	'bcd32',
 ] as const;
 export type ModbusDataType = (typeof MODBUS_DATA_TYPES)[number];
 
@@ -73,3 +83,11 @@ export function registersOf(dataType: ModbusDataType): number {
 			return 1;
 	}
 }
+
+/** The four orders in which a device may send the bytes of a value. */
+export const ORDERS_OF = [
+	{ byteOrder: 'big', wordOrder: 'big' },
+	{ byteOrder: 'big', wordOrder: 'little' },
+	{ byteOrder: 'little', wordOrder: 'big' },
+	{ byteOrder: 'little', wordOrder: 'little' },
+] as const;

@@ -5,8 +5,12 @@ import type { MapRow } from './row.ts';
 
 const units: UnitRules = {
 	isUnit: (code) => ['mm/s', '[in_i]/s', 'Cel', '1', '[g]'].includes(code),
-	fitsQuantity: (unit, quantity) => (quantity === 'velocity' ? unit.endsWith('/s') : quantity === 'temperature' ? unit === 'Cel' : true),
-	conversion: ({ rawUnit, unit }) => (rawUnit === unit || (rawUnit === '[in_i]/s' && unit === 'mm/s') ? ok(null) : refuse('no-conversion', `${rawUnit} does not convert to ${unit}`)),
+	fitsQuantity: (unit, quantity) =>
+		quantity === 'velocity' ? unit.endsWith('/s') : quantity === 'temperature' ? unit === 'Cel' : true,
+	conversion: ({ rawUnit, unit }) =>
+		rawUnit === unit || (rawUnit === '[in_i]/s' && unit === 'mm/s')
+			? ok(null)
+			: refuse('no-conversion', `${rawUnit} does not convert to ${unit}`),
 };
 
 const context = (extra: Partial<CheckContext> = {}): CheckContext => ({
@@ -24,14 +28,38 @@ const context = (extra: Partial<CheckContext> = {}): CheckContext => ({
 });
 
 const modbus = (extra: Partial<MapRow> = {}): MapRow => ({
-	tag: 'HL-3.MDE.H.VEL', source: 'Gateway B', unit: 'mm/s', raw_unit: '[in_i]/s', unit_id: 4, table: 'input-register', register: 100, data_type: 'float32', ...extra,
+	tag: 'HL-3.MDE.H.VEL',
+	source: 'Gateway B',
+	unit: 'mm/s',
+	raw_unit: '[in_i]/s',
+	unit_id: 4,
+	table: 'input-register',
+	register: 100,
+	data_type: 'float32',
+	...extra,
 });
-const opcua = (extra: Partial<MapRow> = {}): MapRow => ({ tag: 'A.TEMP', source: 'Gateway A', unit: 'Cel', node_id: 'nsu=urn:plant:a;s=A.TEMP', ...extra });
-const mqtt = (extra: Partial<MapRow> = {}): MapRow => ({ tag: 'B.FLOW', source: 'Broker', unit: '1', topic: 'hall/flow', value_pointer: '/value', ...extra });
+const opcua = (extra: Partial<MapRow> = {}): MapRow => ({
+	tag: 'A.TEMP',
+	source: 'Gateway A',
+	unit: 'Cel',
+	node_id: 'nsu=urn:plant:a;s=A.TEMP',
+	...extra,
+});
+const mqtt = (extra: Partial<MapRow> = {}): MapRow => ({
+	tag: 'B.FLOW',
+	source: 'Broker',
+	unit: '1',
+	topic: 'hall/flow',
+	value_pointer: '/value',
+	...extra,
+});
 
 const found = (rows: MapRow[], extra?: Partial<CheckContext>) => {
 	const check = checkDraft(rows, context(extra), 7);
-	return { errors: check.errors.map(({ row, field, code }) => `${row} ${field} ${code}`), warnings: check.warnings.map(({ row, field, code }) => `${row} ${field} ${code}`) };
+	return {
+		errors: check.errors.map(({ row, field, code }) => `${row} ${field} ${code}`),
+		warnings: check.warnings.map(({ row, field, code }) => `${row} ${field} ${code}`),
+	};
 };
 
 describe('the check of a draft', () => {
@@ -74,11 +102,16 @@ describe('the check of a draft', () => {
 
 	it('refuses the same name in another case, and names the row that has it', () => {
 		const check = checkDraft([modbus(), modbus({ tag: 'hl-3.mde.h.vel', register: 102 })], context(), 1);
-		expect(check.errors).toEqual([{ tag: 'hl-3.mde.h.vel', row: 2, field: 'tag', code: 'tag-twice', detail: expect.stringContaining('row 1') }]);
+		expect(check.errors).toEqual([
+			{ tag: 'hl-3.mde.h.vel', row: 2, field: 'tag', code: 'tag-twice', detail: expect.stringContaining('row 1') },
+		]);
 	});
 
 	it('refuses two rows that put one machine in two areas', () => {
-		expect(found([modbus({ machine: 'LL-1', area: 'Low Lift' }), modbus({ tag: 'B', register: 102, machine: 'll-1', area: 'Dosing' })]).errors).toEqual(['2 area area-contradicts-machine']);
+		expect(
+			found([modbus({ machine: 'LL-1', area: 'Low Lift' }), modbus({ tag: 'B', register: 102, machine: 'll-1', area: 'Dosing' })])
+				.errors,
+		).toEqual(['2 area area-contradicts-machine']);
 	});
 
 	it('refuses another unit for a tag that has readings, unless the draft converts', () => {
@@ -91,7 +124,11 @@ describe('the check of a draft', () => {
 		['two tags on one address', [modbus(), modbus({ tag: 'B' })], '2 null same-address'],
 		['a register that looks like a reference number', [modbus({ register: 40_001 })], '1 register reference-number'],
 		['a filter that lets several topics feed one tag', [mqtt({ topic: 'hall/+/flow' })], '1 topic several-topics'],
-		['a tag that is stale between its values', [modbus({ expected_every_s: 600, stale_after_s: 60 })], '1 stale_after_s stale-too-soon'],
+		[
+			'a tag that is stale between its values',
+			[modbus({ expected_every_s: 600, stale_after_s: 60 })],
+			'1 stale_after_s stale-too-soon',
+		],
 		['fields of another kind of source', [modbus({ topic: 'x' })], '1 topic field-of-other-kind'],
 		['a source that is switched off', [modbus({ source: 'Off' })], '1 source source-disabled'],
 		['a state without words', [modbus({ quantity: 'state', unit: '1', raw_unit: '1' })], '1 states no-state-words'],

@@ -4,12 +4,17 @@ import { csvToRows, mapToCsv, neutralise, restoreText } from './csv.ts';
 import { tidyRow } from './draft.ts';
 import type { MapRow } from './row.ts';
 
-const bytes = (...parts: (string | number[])[]) => Uint8Array.from(parts.flatMap((part) => (typeof part === 'string' ? [...new TextEncoder().encode(part)] : part)));
+const bytes = (...parts: (string | number[])[]) =>
+	Uint8Array.from(parts.flatMap((part) => (typeof part === 'string' ? [...new TextEncoder().encode(part)] : part)));
 
 describe('reading a map from CSV', () => {
 	it('takes UTF-8 with a byte order mark, CRLF and quoted cells [RFC 4180 §2]', () => {
 		const read = csvToRows(bytes([0xef, 0xbb, 0xbf], 'tag,description,scale\r\nA.1,"hall ""B"", left",0.25\r\n'));
-		expect(read).toEqual({ ok: true, columns: ['tag', 'description', 'scale'], rows: [{ tag: 'A.1', description: 'hall "B", left', scale: 0.25 }] });
+		expect(read).toEqual({
+			ok: true,
+			columns: ['tag', 'description', 'scale'],
+			rows: [{ tag: 'A.1', description: 'hall "B", left', scale: 0.25 }],
+		});
 	});
 
 	it.each([
@@ -56,8 +61,14 @@ describe('reading a map from CSV', () => {
 	});
 
 	it('says what to do with UTF-16 and with bytes that are not UTF-8', () => {
-		expect(csvToRows(bytes([0xff, 0xfe], 't'))).toMatchObject({ ok: false, faults: [{ detail: expect.stringContaining('UTF-16') }] });
-		expect(csvToRows(bytes('tag,description\nA,', [0xe9], '\n'))).toMatchObject({ ok: false, faults: [{ detail: expect.stringContaining('not UTF-8') }] });
+		expect(csvToRows(bytes([0xff, 0xfe], 't'))).toMatchObject({
+			ok: false,
+			faults: [{ detail: expect.stringContaining('UTF-16') }],
+		});
+		expect(csvToRows(bytes('tag,description\nA,', [0xe9], '\n'))).toMatchObject({
+			ok: false,
+			faults: [{ detail: expect.stringContaining('not UTF-8') }],
+		});
 	});
 
 	it('reads grouping in neither style as a number', () => {
@@ -68,7 +79,14 @@ describe('reading a map from CSV', () => {
 
 describe('writing a map as CSV', () => {
 	it('neutralises text that a spreadsheet would run, and leaves numbers alone', () => {
-		expect(['=cmd', '+49 30', '@x', '-5.00', '-a', 'plain'].map(neutralise)).toEqual(["'=cmd", "'+49 30", "'@x", '-5.00', "'-a", 'plain']);
+		expect(['=cmd', '+49 30', '@x', '-5.00', '-a', 'plain'].map(neutralise)).toEqual([
+			"'=cmd",
+			"'+49 30",
+			"'@x",
+			'-5.00',
+			"'-a",
+			'plain',
+		]);
 	});
 
 	it('comes back unchanged', () => {
@@ -79,7 +97,9 @@ describe('writing a map as CSV', () => {
 						tag: fc.stringMatching(/^[A-Za-z0-9][A-Za-z0-9._-]{0,20}$/),
 						plant_tag: fc.option(fc.string({ maxLength: 30 }), { nil: null }),
 						scale: fc.option(fc.double({ noNaN: true, noDefaultInfinity: true }), { nil: null }),
-						sentinels: fc.option(fc.array(fc.oneof(fc.integer(), fc.constant('0x8000')), { minLength: 1, maxLength: 3 }), { nil: null }),
+						sentinels: fc.option(fc.array(fc.oneof(fc.integer(), fc.constant('0x8000')), { minLength: 1, maxLength: 3 }), {
+							nil: null,
+						}),
 						enabled: fc.option(fc.boolean(), { nil: null }),
 					}),
 					{ minLength: 1, maxLength: 5 },

@@ -14,8 +14,22 @@ export type ImportedRow = Partial<MapRow> & { tag: string };
 export type CsvImport = { ok: true; rows: ImportedRow[]; columns: MapField[] } | { ok: false; faults: CellFault[] };
 
 const NUMBER_FIELDS = new Set<MapField>([
-	'id', 'scale', 'offset', 'frequency_hz', 'band_low_hz', 'band_high_hz', 'low_range', 'high_range', 'deadband', 'interval_ms',
-	'expected_every_s', 'stale_after_s', 'frozen_after_s', 'unit_id', 'register', 'bit',
+	'id',
+	'scale',
+	'offset',
+	'frequency_hz',
+	'band_low_hz',
+	'band_high_hz',
+	'low_range',
+	'high_range',
+	'deadband',
+	'interval_ms',
+	'expected_every_s',
+	'stale_after_s',
+	'frozen_after_s',
+	'unit_id',
+	'register',
+	'bit',
 ]);
 /** JSON's number grammar, a leading + aside: no hexadecimal, no blanks, no grouping. */
 const NUMBER = /^[+-]?(0|[1-9]\d*)(\.\d+)?([eE][+-]?\d+)?$/;
@@ -66,7 +80,8 @@ export function csvToRows(input: Uint8Array | string): CsvImport {
 	const declared = /^sep=(.)\r?\n/.exec(text);
 	if (declared) text = text.slice(declared[0].length);
 	const separator = declared?.[1] ?? separatorOf(text);
-	if (![',', ';', '\t'].includes(separator)) return fail(0, 'sep', `separator "${separator}" found; expected comma, semicolon or tab`);
+	if (![',', ';', '\t'].includes(separator))
+		return fail(0, 'sep', `separator "${separator}" found; expected comma, semicolon or tab`);
 
 	const parsed = Papa.parse<string[]>(text, { delimiter: separator, skipEmptyLines: 'greedy' });
 	const broken = parsed.errors.find((error) => error.type === 'Quotes');
@@ -78,7 +93,12 @@ export function csvToRows(input: Uint8Array | string): CsvImport {
 	const faults: CellFault[] = [];
 	const seen = new Set<string>();
 	for (const name of columns) {
-		if (!(MAP_FIELDS as string[]).includes(name)) faults.push({ row: 0, column: name, detail: name === '' ? 'a column without a name' : 'no column of the map has this name' });
+		if (!(MAP_FIELDS as string[]).includes(name))
+			faults.push({
+				row: 0,
+				column: name,
+				detail: name === '' ? 'a column without a name' : 'no column of the map has this name',
+			});
 		else if (seen.has(name)) faults.push({ row: 0, column: name, detail: 'this column stands twice' });
 		seen.add(name);
 	}
@@ -102,12 +122,14 @@ export function csvToRows(input: Uint8Array | string): CsvImport {
 		});
 		const tag = row.tag;
 		if (typeof tag !== 'string' || tag === '') {
-			if (!faults.some((fault) => fault.row === number && fault.column === 'tag')) faults.push({ row: number, column: 'tag', detail: 'empty; every row needs its tag' });
+			if (!faults.some((fault) => fault.row === number && fault.column === 'tag'))
+				faults.push({ row: number, column: 'tag', detail: 'empty; every row needs its tag' });
 			return;
 		}
 		const shape = mapRowSchema.partial().safeParse(row);
 		if (!shape.success) {
-			for (const issue of shape.error.issues) faults.push({ row: number, column: String(issue.path[0] ?? ''), detail: issue.message });
+			for (const issue of shape.error.issues)
+				faults.push({ row: number, column: String(issue.path[0] ?? ''), detail: issue.message });
 			return;
 		}
 		rows.push({ ...row, tag } as ImportedRow);
@@ -162,7 +184,8 @@ function cellValue(column: MapField, cell: string, decimalComma: boolean): CellV
 			if (/^0x[0-9a-fA-F]+$/.test(part)) parts.push(part);
 			else {
 				const value = numberOf(part, decimalComma);
-				if (!value.ok) return { ok: false, detail: `"${part}" found; expected numbers or bit patterns like 0x8000, separated by spaces` };
+				if (!value.ok)
+					return { ok: false, detail: `"${part}" found; expected numbers or bit patterns like 0x8000, separated by spaces` };
 				parts.push(value.value as number);
 			}
 		}
@@ -175,7 +198,8 @@ function numberOf(text: string, decimalComma: boolean): CellValue {
 	// U+2212 is what some spreadsheets write for minus.
 	let plain = text.replace('\u2212', '-');
 	if (decimalComma) {
-		if (plain.includes(',') && plain.includes('.')) return { ok: false, detail: `"${text}" has both comma and point; write numbers without grouping` };
+		if (plain.includes(',') && plain.includes('.'))
+			return { ok: false, detail: `"${text}" has both comma and point; write numbers without grouping` };
 		plain = plain.replace(',', '.');
 	}
 	if (!NUMBER.test(plain) || !Number.isFinite(Number(plain))) {

@@ -4,8 +4,25 @@ import { MODBUS_DATA_TYPES, MODBUS_TABLES } from './address.ts';
 
 /** Closed list of quantities, each with the dimension its units must have (UCUM base form). */
 export const QUANTITIES = [
-	'velocity', 'acceleration', 'displacement', 'impact', 'temperature', 'pressure', 'differential-pressure', 'flow', 'level', 'speed',
-	'power', 'current', 'voltage', 'frequency', 'battery', 'signal', 'state', 'count', 'ratio',
+	'velocity',
+	'acceleration',
+	'displacement',
+	'impact',
+	'temperature',
+	'pressure',
+	'differential-pressure',
+	'flow',
+	'level',
+	'speed',
+	'power',
+	'current',
+	'voltage',
+	'frequency',
+	'battery',
+	'signal',
+	'state',
+	'count',
+	'ratio',
 ] as const;
 export type Quantity = (typeof QUANTITIES)[number];
 export const AXES = ['horizontal', 'vertical', 'axial', 'none'] as const;
@@ -67,7 +84,10 @@ export const mapRowSchema = z.strictObject({
 	word_order: z.string().max(10).nullish(),
 	bit: number,
 	/** Numbers of the decoded raw, or bit patterns like `0x8000`. */
-	sentinels: z.array(z.union([z.number(), z.string().max(40)])).max(32).nullish(),
+	sentinels: z
+		.array(z.union([z.number(), z.string().max(40)]))
+		.max(32)
+		.nullish(),
 	node_id: z.string().max(500).nullish(),
 	index_range: z.string().max(40).nullish(),
 	topic: z.string().max(1_000).nullish(),
@@ -101,7 +121,14 @@ export const CLOSED_LISTS: Partial<Record<MapField, readonly string[]>> = {
 };
 
 /** Defaults that stand where a row says nothing. */
-export const ROW_DEFAULTS = { scale: 1, offset: 0, interval_ms: 1_000, enabled: true, byte_order: 'big', word_order: 'big' } as const;
+export const ROW_DEFAULTS = {
+	scale: 1,
+	offset: 0,
+	interval_ms: 1_000,
+	enabled: true,
+	byte_order: 'big',
+	word_order: 'big',
+} as const;
 
 /** A finding of the check: an error blocks publishing, a warning does not. `row` counts from 1. */
 export interface Finding {

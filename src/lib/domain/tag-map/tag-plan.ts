@@ -22,6 +22,8 @@ export interface TagPlan {
 	unit: string;
 	detector: Detector;
 	frequencyHz: number | null;
+	/** value = (raw × scale + offset) × factor + offset of this line. */
+	conversion: { factor: number; offset: number };
 	lowRange: number | null;
 	highRange: number | null;
 	/** Null stores every reading; 0 only changes; above 0 in the tag's unit. */

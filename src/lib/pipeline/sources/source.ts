@@ -36,7 +36,11 @@ export type RawInput =
 
 /** Why there is no value. Codes are members of `domain/reason.ts`. */
 export type Fault =
-	| { code: 'no-answer' | 'no-connection' | 'source-offline' | 'undecodable' | 'node-missing' | 'namespace-missing' | 'source-bad'; detail?: string }
+	| {
+			code:
+				'no-answer' | 'no-connection' | 'source-offline' | 'undecodable' | 'node-missing' | 'namespace-missing' | 'source-bad';
+			detail?: string;
+	  }
 	| { code: 'exception'; exception: number; detail?: string };
 
 /**

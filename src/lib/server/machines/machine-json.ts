@@ -10,7 +10,10 @@ export const machineInput = z.strictObject({
 	description: text,
 	/** kind, power_kw, speed_rpm, iso_group, foundation, orientation, vanes, pump_category: what the picture and the zones need. */
 	data: data.optional(),
-	points: z.array(z.strictObject({ name: z.string().trim().min(1).max(120), description: text, data: data.optional() })).max(200).optional(),
+	points: z
+		.array(z.strictObject({ name: z.string().trim().min(1).max(120), description: text, data: data.optional() }))
+		.max(200)
+		.optional(),
 });
 export const machineChange = machineInput.partial().extend({ version: z.int().optional() });
 
@@ -21,6 +24,8 @@ export const machineJson = z.object({
 	description: z.string().nullable(),
 	data: z.record(z.string(), z.unknown()),
 	version: z.int(),
-	points: z.array(z.object({ id: z.int(), name: z.string(), description: z.string().nullable(), data: z.record(z.string(), z.unknown()) })),
+	points: z.array(
+		z.object({ id: z.int(), name: z.string(), description: z.string().nullable(), data: z.record(z.string(), z.unknown()) }),
+	),
 	tags: z.int(),
 });

@@ -113,7 +113,9 @@ export async function deleteMachine(pool: Pool, id: number, caller: Caller): Pro
 async function areaOf(db: Db, siteId: number, name: string | null | undefined): Promise<number | null> {
 	if (!name?.trim()) return null;
 	await db.execute(sql`INSERT INTO areas (site_id, name) VALUES (${siteId}, ${name.trim()}) ON CONFLICT DO NOTHING`);
-	const found = await db.execute<{ id: number }>(sql`SELECT id FROM areas WHERE site_id = ${siteId} AND lower(name) = lower(${name.trim()})`);
+	const found = await db.execute<{ id: number }>(
+		sql`SELECT id FROM areas WHERE site_id = ${siteId} AND lower(name) = lower(${name.trim()})`,
+	);
 	return found.rows[0]?.id ?? null;
 }
 
@@ -129,6 +131,21 @@ async function savePoints(db: Db, machineId: number, points: NonNullable<Machine
 	}
 }
 
-async function audit(db: Db, caller: Caller, action: string, subject: Machine, before: Machine | null, after: Machine | null = subject): Promise<void> {
-	await recordAudit(db, { ...caller, action, subjectKind: 'machine', subjectId: subject.id, subjectName: subject.name, before, after });
+async function audit(
+	db: Db,
+	caller: Caller,
+	action: string,
+	subject: Machine,
+	before: Machine | null,
+	after: Machine | null = subject,
+): Promise<void> {
+	await recordAudit(db, {
+		...caller,
+		action,
+		subjectKind: 'machine',
+		subjectId: subject.id,
+		subjectName: subject.name,
+		before,
+		after,
+	});
 }

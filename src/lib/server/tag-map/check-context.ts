@@ -30,7 +30,13 @@ export async function findCheckContext(db: Db, siteId: number, convert: boolean)
 }
 
 /** Checks rows as they would be published. */
-export async function checkRows(db: Db, siteId: number, rows: readonly IdentifiedRow[], convert: boolean, version: number): Promise<DraftCheck> {
+export async function checkRows(
+	db: Db,
+	siteId: number,
+	rows: readonly IdentifiedRow[],
+	convert: boolean,
+	version: number,
+): Promise<DraftCheck> {
 	return checkDraft(rows, await findCheckContext(db, siteId, convert), version);
 }
 

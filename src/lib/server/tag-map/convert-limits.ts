@@ -15,7 +15,9 @@ export async function convertSettledTags(
 	diff: MapDiff,
 	{ revision, by, convert }: { revision: number; by: string; convert: boolean },
 ): Promise<void> {
-	const moved = diff.changed.filter(({ before, after }) => before.unit !== after.unit || detectorOf(before) !== detectorOf(after));
+	const moved = diff.changed.filter(
+		({ before, after }) => before.unit !== after.unit || detectorOf(before) !== detectorOf(after),
+	);
 	if (!convert || moved.length === 0) return;
 	const factors = new Map<number, { factor: number; offset: number }>();
 	for (const { id, before, after } of moved) {
@@ -26,7 +28,14 @@ export async function convertSettledTags(
 		);
 		if (line) factors.set(id, line);
 	}
-	const found = await db.execute<{ id: number; tag_id: number; kind: string; value: number | null; deadband: number; baseline: { mean: number; sigma: number } | null }>(
+	const found = await db.execute<{
+		id: number;
+		tag_id: number;
+		kind: string;
+		value: number | null;
+		deadband: number;
+		baseline: { mean: number; sigma: number } | null;
+	}>(
 		sql`SELECT id, tag_id, kind, value, deadband, baseline FROM limits WHERE to_revision IS NULL AND tag_id = ANY(${sql.param([...factors.keys()])}::int[])`,
 	);
 	if (found.rows.length === 0) return;
@@ -41,7 +50,13 @@ export async function convertSettledTags(
 		if (!line) continue;
 		const absolute = (x: number) => x * line.factor + line.offset;
 		const value =
-			limit.value === null ? null : limit.kind === 'high' || limit.kind === 'low' ? absolute(limit.value) : limit.kind === 'rate' ? limit.value * line.factor : limit.value;
+			limit.value === null
+				? null
+				: limit.kind === 'high' || limit.kind === 'low'
+					? absolute(limit.value)
+					: limit.kind === 'rate'
+						? limit.value * line.factor
+						: limit.value;
 		const baseline = limit.baseline
 			? { ...limit.baseline, mean: absolute(limit.baseline.mean), sigma: limit.baseline.sigma * Math.abs(line.factor) }
 			: null;

@@ -57,14 +57,17 @@ export async function editDraft(
 		return ok(await inTransaction(pool, (db) => applyEdit(db, edit)));
 	} catch (error) {
 		if (!(error instanceof EditRefused)) throw error;
-		if (error.reason === 'row-changed') return { ok: false, reason: 'row-changed', detail: error.message, conflicts: error.conflicts };
+		if (error.reason === 'row-changed')
+			return { ok: false, reason: 'row-changed', detail: error.message, conflicts: error.conflicts };
 		return refuse(error.reason, error.message);
 	}
 }
 
 async function applyEdit(db: Db, edit: DraftEdit): Promise<DraftAnswer> {
 	const { siteId, by } = edit;
-	await db.execute(sql`INSERT INTO map_drafts (site_id, version, updated_by) VALUES (${siteId}, 0, ${by}) ON CONFLICT DO NOTHING`);
+	await db.execute(
+		sql`INSERT INTO map_drafts (site_id, version, updated_by) VALUES (${siteId}, 0, ${by}) ON CONFLICT DO NOTHING`,
+	);
 	await db.execute(sql`SELECT 1 FROM map_drafts WHERE site_id = ${siteId} FOR UPDATE`);
 	const before = await findDraft(db, siteId);
 	if (edit.ifVersion !== null && edit.ifVersion !== before.version) {
@@ -87,7 +90,13 @@ async function applyEdit(db: Db, edit: DraftEdit): Promise<DraftAnswer> {
 		const current = fields.id != null ? byId.get(fields.id) : byName.get((fields.tag ?? '').trim().toLowerCase());
 		if (fields.id != null && !current) throw new EditRefused('unknown-row', `no row with id ${fields.id} in this draft`);
 		if (sentVersion !== undefined && current && sentVersion !== current.rowVersion) {
-			conflicts.push({ tag: current.row.tag, sent_version: sentVersion, current_version: current.rowVersion, sent, current: current.state === 'removed' ? null : current.row });
+			conflicts.push({
+				tag: current.row.tag,
+				sent_version: sentVersion,
+				current_version: current.rowVersion,
+				sent,
+				current: current.state === 'removed' ? null : current.row,
+			});
 			continue;
 		}
 		if (isRemoval) {
@@ -102,7 +111,11 @@ async function applyEdit(db: Db, edit: DraftEdit): Promise<DraftAnswer> {
 		else fresh.push(merged);
 	}
 	if (conflicts.length > 0) {
-		throw new EditRefused('row-changed', `${conflicts.length} ${conflicts.length === 1 ? 'row was' : 'rows were'} changed by somebody else`, conflicts);
+		throw new EditRefused(
+			'row-changed',
+			`${conflicts.length} ${conflicts.length === 1 ? 'row was' : 'rows were'} changed by somebody else`,
+			conflicts,
+		);
 	}
 	for (const { id, row } of await identify(db, siteId, fresh, published)) touched.set(id, row);
 	if (edit.mode === 'replace') for (const row of before.rows) if (!touched.has(row.id)) touched.set(row.id, null);
@@ -117,7 +130,12 @@ async function applyEdit(db: Db, edit: DraftEdit): Promise<DraftAnswer> {
 }
 
 /** Gives new rows their tag's id for life: the retired tag of the same name, quantity and unit goes on, otherwise a new one begins. */
-async function identify(db: Db, siteId: number, rows: readonly MapRow[], published: ReadonlyMap<number, MapRow>): Promise<{ id: number; row: MapRow }[]> {
+async function identify(
+	db: Db,
+	siteId: number,
+	rows: readonly MapRow[],
+	published: ReadonlyMap<number, MapRow>,
+): Promise<{ id: number; row: MapRow }[]> {
 	if (rows.length === 0) return [];
 	const retired = await db.execute<{ id: number; name: string; unit: string; quantity: string | null }>(
 		sql`SELECT id, name, unit, quantity FROM tags WHERE site_id = ${siteId} AND retired_at IS NOT NULL
@@ -161,7 +179,9 @@ async function saveRows(
 		await db.execute(sql`DELETE FROM draft_rows WHERE site_id = ${siteId} AND tag_id = ANY(${sql.param(same)}::int[])`);
 	}
 	if (different.length === 0) return;
-	const json = JSON.stringify(different.map(({ id, row }) => ({ tag_id: id, row: row === null ? null : { ...row, id: undefined } })));
+	const json = JSON.stringify(
+		different.map(({ id, row }) => ({ tag_id: id, row: row === null ? null : { ...row, id: undefined } })),
+	);
 	await db.execute(
 		sql`INSERT INTO draft_rows (site_id, tag_id, row, row_version, updated_by)
 			SELECT ${siteId}, given.tag_id, nullif(given.row, 'null'::jsonb), ${version}, ${by}
@@ -175,8 +195,9 @@ async function saveRows(
 export async function discardDraft(pool: Pool, siteId: number, by: string): Promise<number> {
 	return inTransaction(pool, async (db) => {
 		const gone = await db.execute(sql`DELETE FROM draft_rows WHERE site_id = ${siteId}`);
-		await db.execute(sql`UPDATE map_drafts SET version = version + 1, convert = false, updated_at = now(), updated_by = ${by} WHERE site_id = ${siteId}`);
+		await db.execute(
+			sql`UPDATE map_drafts SET version = version + 1, convert = false, updated_at = now(), updated_by = ${by} WHERE site_id = ${siteId}`,
+		);
 		return gone.rowCount ?? 0;
 	});
 }
-

@@ -16,9 +16,20 @@ export interface RevisionEntry {
 }
 
 /** Revisions, newest first; `before` continues a page. */
-export async function listRevisions(db: Db, siteId: number, { before, limit }: { before: number | null; limit: number }): Promise<RevisionEntry[]> {
+export async function listRevisions(
+	db: Db,
+	siteId: number,
+	{ before, limit }: { before: number | null; limit: number },
+): Promise<RevisionEntry[]> {
 	const found = await db.execute<{
-		revision: number; published_at: Date; published_by: string; note: string; started: number; stopped: number; changed: number; restored_from: number | null;
+		revision: number;
+		published_at: Date;
+		published_by: string;
+		note: string;
+		started: number;
+		stopped: number;
+		changed: number;
+		restored_from: number | null;
 	}>(
 		sql`SELECT revision, published_at, published_by, note, started, stopped, changed, restored_from FROM map_revisions
 			WHERE site_id = ${siteId} AND (${before}::int IS NULL OR revision < ${before}::int) ORDER BY revision DESC LIMIT ${limit}`,

@@ -6,7 +6,10 @@ import { mapRowSchema, type DraftCheck, type MapRow } from '#lib/domain/tag-map/
 import { CSV_TYPE } from '#lib/server/http/negotiate.ts';
 
 /** A row as the API answers it: what is said, nothing that is null. */
-export const rowJson = mapRowSchema.extend({ row_version: z.int().optional(), state: z.enum(['published', 'added', 'changed', 'removed']).optional() });
+export const rowJson = mapRowSchema.extend({
+	row_version: z.int().optional(),
+	state: z.enum(['published', 'added', 'changed', 'removed']).optional(),
+});
 
 /** A row as the API takes it: any part of a row, its version when it was read, or its removal. */
 export const sentRow = mapRowSchema.partial().extend({
@@ -16,7 +19,13 @@ export const sentRow = mapRowSchema.partial().extend({
 	state: z.string().optional(),
 });
 
-const findingJson = z.object({ tag: z.string(), row: z.int(), field: z.string().nullable(), code: z.string(), detail: z.string() });
+const findingJson = z.object({
+	tag: z.string(),
+	row: z.int(),
+	field: z.string().nullable(),
+	code: z.string(),
+	detail: z.string(),
+});
 export const checkJson = z.object({ errors: z.array(findingJson), warnings: z.array(findingJson), version: z.int() });
 export const publishedJson = z.object({ revision: z.int(), started: z.int(), stopped: z.int(), changed: z.int() });
 export const diffJson = z.object({
@@ -45,7 +54,11 @@ export function versionOfTag(header: string | null): number | null {
 /** Rows as a CSV answer. */
 export function csvAnswer(rows: readonly MapRow[], name: string, headers: Record<string, string> = {}): Response {
 	return new Response(mapToCsv(rows), {
-		headers: { 'content-type': `${CSV_TYPE}; charset=utf-8`, 'content-disposition': `attachment; filename="${name}.csv"`, ...headers },
+		headers: {
+			'content-type': `${CSV_TYPE}; charset=utf-8`,
+			'content-disposition': `attachment; filename="${name}.csv"`,
+			...headers,
+		},
 	});
 }
 

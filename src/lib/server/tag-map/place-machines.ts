@@ -7,7 +7,9 @@ import type { Db } from '#lib/server/db/pool.ts';
 export async function placeMachines(db: Db, siteId: number, rows: readonly MapRow[]): Promise<void> {
 	const named = rows.filter((row) => row.machine || row.area);
 	if (named.length === 0) return;
-	const json = JSON.stringify(named.map((row) => ({ area: row.area ?? null, machine: row.machine ?? null, point: row.point ?? null })));
+	const json = JSON.stringify(
+		named.map((row) => ({ area: row.area ?? null, machine: row.machine ?? null, point: row.point ?? null })),
+	);
 	const given = sql`jsonb_to_recordset(${json}::jsonb) AS given(area text, machine text, point text)`;
 	await db.execute(
 		sql`INSERT INTO areas (site_id, name) SELECT DISTINCT ON (lower(area)) ${siteId}::int, area FROM ${given} WHERE area IS NOT NULL

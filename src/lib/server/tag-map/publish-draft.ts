@@ -131,15 +131,28 @@ async function publishRows(
 
 /** Rows with what changed in them, at most 200, so that an audit entry of a large import stays readable. */
 function summary(diff: MapDiff, side: 'before' | 'after'): Record<string, unknown> {
-	const pick = (row: MapRow, fields: readonly (keyof MapRow)[]) => Object.fromEntries(fields.map((field) => [field, row[field] ?? null]));
+	const pick = (row: MapRow, fields: readonly (keyof MapRow)[]) =>
+		Object.fromEntries(fields.map((field) => [field, row[field] ?? null]));
 	return {
 		rows: diff.changed.slice(0, 200).map((change) => ({ tag: change.before.tag, ...pick(change[side], change.fields) })),
-		...(side === 'before' ? { removed: diff.removed.slice(0, 200).map((row) => row.tag) } : { added: diff.added.slice(0, 200).map((row) => row.tag) }),
+		...(side === 'before'
+			? { removed: diff.removed.slice(0, 200).map((row) => row.tag) }
+			: { added: diff.added.slice(0, 200).map((row) => row.tag) }),
 	};
 }
 
-async function updateTags(db: Db, siteId: number, diff: MapDiff, touched: readonly IdentifiedRow[], revision: number): Promise<void> {
-	const unitChanged = new Set(diff.changed.filter(({ before, after }) => before.unit !== after.unit || (before.detector ?? 'none') !== (after.detector ?? 'none')).map((change) => change.id));
+async function updateTags(
+	db: Db,
+	siteId: number,
+	diff: MapDiff,
+	touched: readonly IdentifiedRow[],
+	revision: number,
+): Promise<void> {
+	const unitChanged = new Set(
+		diff.changed
+			.filter(({ before, after }) => before.unit !== after.unit || (before.detector ?? 'none') !== (after.detector ?? 'none'))
+			.map((change) => change.id),
+	);
 	const renamed = diff.changed.filter(({ before, after }) => before.tag !== after.tag).map((change) => change.id);
 	await db.execute(
 		sql`UPDATE tags SET retired_at = now(), revision = ${revision} WHERE site_id = ${siteId} AND id = ANY(${sql.param(diff.removed.map((row) => row.id))}::int[])`,
@@ -173,7 +186,9 @@ async function updateTags(db: Db, siteId: number, diff: MapDiff, touched: readon
 			WHERE t.id = given.id`,
 	);
 	// A value in the old unit must not be shown with the new one.
-	await db.execute(sql`DELETE FROM latest WHERE tag_id = ANY(${sql.param([...unitChanged, ...diff.removed.map((row) => row.id)])}::int[])`);
+	await db.execute(
+		sql`DELETE FROM latest WHERE tag_id = ANY(${sql.param([...unitChanged, ...diff.removed.map((row) => row.id)])}::int[])`,
+	);
 	await db.execute(sql`DELETE FROM judging_states WHERE tag_id = ANY(${sql.param([...unitChanged])}::int[])`);
 }
 
@@ -185,5 +200,6 @@ async function dropSettledDraftRows(db: Db, siteId: number): Promise<void> {
 	const settled = found.rows
 		.filter(({ drafted, row }) => (drafted === null ? row === null : row !== null && changedFields(row, drafted).length === 0))
 		.map(({ id }) => id);
-	if (settled.length > 0) await db.execute(sql`DELETE FROM draft_rows WHERE site_id = ${siteId} AND tag_id = ANY(${sql.param(settled)}::int[])`);
+	if (settled.length > 0)
+		await db.execute(sql`DELETE FROM draft_rows WHERE site_id = ${siteId} AND tag_id = ANY(${sql.param(settled)}::int[])`);
 }

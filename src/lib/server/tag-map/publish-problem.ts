@@ -13,7 +13,11 @@ export function publishOrProblem(outcome: Outcome<Published> & { check?: DraftCh
 				extra: outcome.check ? { check: outcome.check } : {},
 			});
 		case 'draft-changed':
-			throw new Problem(409, 'draft-changed', `Somebody changed the draft: ${outcome.detail ?? ''}. Look at the new difference first.`);
+			throw new Problem(
+				409,
+				'draft-changed',
+				`Somebody changed the draft: ${outcome.detail ?? ''}. Look at the new difference first.`,
+			);
 		case 'unknown-revision':
 			throw new Problem(404, 'revision-not-found', `This site's map has no such revision: ${outcome.detail ?? ''}.`);
 		default:
