@@ -1,0 +1,132 @@
+// Edge: store. May touch: alarm tables, in the caller's transaction.
+import type { Client } from '#lib/server/db/pool.ts';
+import type { TagAlarmChange } from './write-batch.ts';
+
+const iso = (at: number) => new Date(at).toISOString();
+
+/**
+ * Applies alarm changes in their order. Written again after a restart they change nothing: an excursion is known by tag, direction and the moment it was raised.
+ */
+export async function applyAlarmChanges(client: Client, changes: readonly TagAlarmChange[]): Promise<void> {
+	for (const change of changes) {
+		switch (change.kind) {
+			case 'raised':
+				await raise(client, change);
+				break;
+			case 'escalated':
+			case 'stepped-down': {
+				const moved = await client.query<{ id: number }>(
+					`UPDATE alarms SET level = CASE WHEN level = 'danger' OR $5 = 'danger' THEN 'danger' ELSE level END, level_now = $5,
+						escalated_at = CASE WHEN $6 AND escalated_at IS NULL THEN $7::timestamptz ELSE escalated_at END,
+						limit_id = CASE WHEN $6 THEN coalesce($8::int, limit_id) ELSE limit_id END,
+						acknowledged_at = CASE WHEN $6 THEN NULL ELSE acknowledged_at END, acknowledged_by = CASE WHEN $6 THEN NULL ELSE acknowledged_by END
+					 WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND raised_at = $4 AND cleared_at IS NULL AND level_now IS DISTINCT FROM $5
+					 RETURNING id`,
+					[
+						change.tagId,
+						change.direction,
+						change.isTest,
+						iso(change.raisedAt),
+						change.levelNow,
+						change.kind === 'escalated',
+						iso(change.at),
+						change.limitId || null,
+					],
+				);
+				await record(client, moved.rows[0]?.id, change);
+				break;
+			}
+			case 'cleared': {
+				const cleared = await client.query<{ id: number }>(
+					`UPDATE alarms SET cleared_at = greatest($5::timestamptz, raised_at), level_now = NULL
+					 WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND raised_at <= $4 AND cleared_at IS NULL AND is_late = $6 RETURNING id`,
+					[change.tagId, change.direction, change.isTest, iso(change.raisedAt), iso(change.at), change.isLate],
+				);
+				await record(client, cleared.rows[0]?.id, change);
+				break;
+			}
+		}
+	}
+}
+
+async function raise(client: Client, change: TagAlarmChange): Promise<void> {
+	const open = change.isLate
+		? { rowCount: 0 }
+		: await client.query('SELECT 1 FROM alarms WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND cleared_at IS NULL', [
+				change.tagId,
+				change.direction,
+				change.isTest,
+			]);
+	if ((open.rowCount ?? 0) > 0) return;
+	const made = await client.query<{ id: number }>(
+		`INSERT INTO alarms (site_id, tag_id, direction, kind, level, level_now, raised_value, is_uncertain, is_late, is_test, raised_at, cleared_at, limit_id)
+		 SELECT $1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11::timestamptz, CASE WHEN $9 THEN $11::timestamptz END, (SELECT id FROM limits WHERE id = $12)
+		 ON CONFLICT DO NOTHING RETURNING id`,
+		[
+			change.siteId,
+			change.tagId,
+			change.direction,
+			change.limitKind,
+			change.level,
+			change.isLate ? null : change.levelNow,
+			change.value,
+			change.isUncertain,
+			change.isLate,
+			change.isTest,
+			iso(change.raisedAt),
+			change.limitId || null,
+		],
+	);
+	await record(client, made.rows[0]?.id, change);
+}
+
+async function record(client: Client, alarmId: number | undefined, change: TagAlarmChange): Promise<void> {
+	if (alarmId === undefined) return;
+	await client.query('INSERT INTO alarm_events (alarm_id, at, kind, level, value) VALUES ($1, $2, $3, $4, $5)', [
+		alarmId,
+		iso(change.at),
+		change.kind,
+		change.levelNow ?? change.level,
+		change.value,
+	]);
+}
+
+/** Raises the one connection alarm of a lost source; its tags' stale alarms are suppressed as its consequence and counted. Harmless when it is raised already. */
+export async function raiseConnectionAlarm(
+	client: Pick<Client, 'query'>,
+	source: { sourceId: string; siteId: number; at: number; suppressed: number },
+): Promise<boolean> {
+	const made = await client.query<{ id: number }>(
+		`INSERT INTO alarms (site_id, source_id, direction, kind, level, level_now, raised_at, suppressed_count)
+		 VALUES ($1, $2, 'connection', 'connection', 'alert', 'alert', $3, $4) ON CONFLICT DO NOTHING RETURNING id`,
+		[source.siteId, source.sourceId, iso(source.at), source.suppressed],
+	);
+	const id = made.rows[0]?.id;
+	if (id === undefined) {
+		await client.query(
+			'UPDATE alarms SET suppressed_count = greatest(suppressed_count, $2) WHERE source_id = $1 AND cleared_at IS NULL',
+			[source.sourceId, source.suppressed],
+		);
+		return false;
+	}
+	await client.query("INSERT INTO alarm_events (alarm_id, at, kind, level) VALUES ($1, $2, 'raised', 'alert')", [
+		id,
+		iso(source.at),
+	]);
+	return true;
+}
+
+/** Clears a source's connection alarm; false when none was open. */
+export async function clearConnectionAlarm(
+	client: Pick<Client, 'query'>,
+	source: { sourceId: string; at: number },
+): Promise<boolean> {
+	const cleared = await client.query<{ id: number }>(
+		'UPDATE alarms SET cleared_at = greatest($2::timestamptz, raised_at), level_now = NULL WHERE source_id = $1 AND cleared_at IS NULL RETURNING id',
+		[source.sourceId, iso(source.at)],
+	);
+	const id = cleared.rows[0]?.id;
+	if (id === undefined) return false;
+	await client.query("INSERT INTO alarm_events (alarm_id, at, kind) VALUES ($1, $2, 'cleared')", [id, iso(source.at)]);
+	return true;
+}

@@ -1,0 +1,85 @@
+// Edge: store. May touch: pool; partition functions of the database.
+import type { Client, Pool } from '#lib/server/db/pool.ts';
+
+const DAY_MS = 86_400_000;
+/** Days kept ready ahead of now; maintenance runs hourly, so a week of it may fail before anything is missed. */
+const DAYS_AHEAD = 7;
+
+/** `2026-12-01` of a time, UTC. */
+export function dayOf(at: number): string {
+	return new Date(at).toISOString().slice(0, 10);
+}
+
+function monthOf(at: number, plus = 0): string {
+	const date = new Date(at);
+	return new Date(Date.UTC(date.getUTCFullYear(), date.getUTCMonth() + plus, 1)).toISOString().slice(0, 10);
+}
+
+type Queryable = Pick<Pool, 'query'> | Pick<Client, 'query'>;
+
+/** Makes the partition of readings for the day of `at`; true when it was missing. */
+export async function ensureReadingDay(client: Queryable, at: number): Promise<boolean> {
+	const answer = await client.query<{ made: boolean }>("SELECT ensure_partition('readings', $1::date, $2::date) AS made", [
+		dayOf(at),
+		dayOf(at + DAY_MS),
+	]);
+	return answer.rows[0]?.made ?? false;
+}
+
+/** Makes the roll-up partitions of the month of `at`. */
+export async function ensureRollupMonth(client: Queryable, at: number): Promise<void> {
+	for (const parent of ['rollups_minute', 'rollups_hour'])
+		await client.query('SELECT ensure_partition($1, $2::date, $3::date)', [parent, monthOf(at), monthOf(at, 1)]);
+}
+
+/** Makes the journal's partition of a day. */
+export async function ensureJournalDay(client: Queryable, at: number): Promise<void> {
+	await client.query("SELECT ensure_partition('feed_journal', $1::date, $2::date)", [dayOf(at), dayOf(at + DAY_MS)]);
+}
+
+/** Makes every partition that the next week needs; harmless when they are there. Run at start and hourly. */
+export async function ensurePartitionsAhead(client: Queryable, now: number): Promise<void> {
+	for (let day = -1; day <= DAYS_AHEAD; day += 1) {
+		await ensureReadingDay(client, now + day * DAY_MS);
+		await ensureJournalDay(client, now + day * DAY_MS);
+	}
+	for (const at of [now - 31 * DAY_MS, now, now + 31 * DAY_MS]) await ensureRollupMonth(client, at);
+}
+
+export interface Retention {
+	rawDays: number;
+	minuteDays: number;
+	hourDays: number;
+	journalDays: number;
+}
+export const RETENTION: Retention = { rawDays: 400, minuteDays: 730, hourDays: 3_650, journalDays: 14 };
+
+/** Oldest time that is kept as raw readings. */
+export function rawEdgeOf(now: number, retention: Retention = RETENTION): number {
+	return now - retention.rawDays * DAY_MS;
+}
+
+/**
+ * Drops partitions past their retention, by the wall clock and never by the newest row, so that one reading from the future empties nothing.
+ * Answers how many were dropped.
+ */
+export async function dropExpired(pool: Pool, now: number, retention: Retention = RETENTION): Promise<number> {
+	let dropped = 0;
+	for (const [parent, days] of [
+		['readings', retention.rawDays],
+		['rollups_minute', retention.minuteDays],
+		['rollups_hour', retention.hourDays],
+		['feed_journal', retention.journalDays],
+	] as const) {
+		const answer = await pool.query<{ n: number }>('SELECT drop_partitions($1, $2::date) AS n', [
+			parent,
+			dayOf(now - days * DAY_MS),
+		]);
+		dropped += answer.rows[0]?.n ?? 0;
+	}
+	// What the journal no longer holds is below every cursor's reach.
+	await pool.query(
+		`UPDATE feed_heads h SET oldest = greatest(h.oldest, coalesce((SELECT min(j.first_position) - 1 FROM feed_journal j WHERE j.site_id = h.site_id), h.position))`,
+	);
+	return dropped;
+}
