@@ -33,7 +33,7 @@ const matchers: Matcher[] = ROUTES.map(({ id, file }) => {
 }).sort((a, b) => a.rank.localeCompare(b.rank));
 
 /** A browser's cookie jar, just enough of it. */
-export type Jar = Map<string, { value: string; options: Record<string, unknown> }>;
+export type Jar = Map<string, { value: string; options: object }>;
 
 function cookiesOf(jar: Jar): Cookies {
 	return {

@@ -74,7 +74,10 @@ export async function saveLimits(pool: Pool, input: SaveLimitsInput): Promise<Sa
 		const ends: number[] = [];
 		const begins: (typeof limits.$inferInsert)[] = [];
 		const changed: { id: number; name: string; before: Limit[]; after: Limit[] }[] = [];
-		for (const tag of found) {
+		// In the order given, so that a list reads as it was sent.
+		for (const name of names) {
+			const tag = byName.get(name);
+			if (!tag) continue;
 			const before = standing.filter((row) => row.tagId === tag.id);
 			const after = input.limits.filter((limit) => limit.tag.toLowerCase() === tag.name.toLowerCase()).map(toLimitColumns);
 			const gone = before.filter((old) => !after.some((one) => isSameLimit(columnsOf(old), one)));
