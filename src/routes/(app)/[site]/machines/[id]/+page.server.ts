@@ -1,0 +1,12 @@
+import { error } from '@sveltejs/kit';
+import { webDb } from '#lib/server/db/database.ts';
+import { requireSite } from '#lib/server/identity/require.ts';
+import { listMachines } from '#lib/server/machines/machines.ts';
+import type { PageServerLoad } from './$types';
+
+export const load: PageServerLoad = async ({ locals, params }) => {
+	const { site } = await requireSite(locals, params.site, 'site:read');
+	const [machine] = /^\d{1,9}$/.test(params.id) ? await listMachines(webDb(), site.id, Number(params.id)) : [];
+	if (!machine) error(404, 'This site has no such machine.');
+	return { title: machine.name, machine };
+};

@@ -1,0 +1,8 @@
+import { requirePermission } from '#lib/server/identity/require.ts';
+import type { PageServerLoad } from './$types';
+
+/** The page reads over the API, live; here only the right is asked. */
+export const load: PageServerLoad = ({ locals, params }) => {
+	requirePermission(locals, params.site, 'site:read');
+	return { title: 'Tag map' };
+};
