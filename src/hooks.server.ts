@@ -20,6 +20,7 @@ const WITHOUT_IDENTITY = new Set(['/healthz', '/readyz', '/api/v1/openapi.json']
 export const init: ServerInit = () => {
 	const config = readConfig();
 	armShutdown();
+	onShutdown(closeWebPool);
 	const outbox = startOutbox(webPool(), config);
 	const cleaning = setInterval(
 		() => removeOldSessions(webDb()).catch((thrown) => log.warn({ err: thrown }, 'old sessions were not removed')),
@@ -30,7 +31,6 @@ export const init: ServerInit = () => {
 		clearInterval(cleaning);
 		await outbox.stop();
 	});
-	onShutdown(closeWebPool);
 };
 
 async function identify(event: RequestEvent): Promise<void> {

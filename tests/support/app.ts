@@ -69,6 +69,7 @@ export async function createApp(): Promise<App> {
 	process.env.MILLRACE_LOG = 'silent';
 	const { handle } = await import('../../src/hooks.server.ts');
 	const { closeWebPool } = await import('#lib/server/db/database.ts');
+	const { closeAll } = await import('#lib/server/shutdown.ts');
 	const sql = new pg.Pool({ connectionString: database.url, max: 3 });
 	return {
 		url: database.url,
@@ -76,6 +77,7 @@ export async function createApp(): Promise<App> {
 		ask: (path, ask = {}) => request(handle, path, ask),
 		async close() {
 			await sql.end();
+			await closeAll();
 			await closeWebPool();
 			await database.drop();
 		},

@@ -6,7 +6,7 @@ export const shutdownSignal: AbortSignal = stopping.signal;
 
 const acts: (() => Promise<void>)[] = [];
 
-/** Adds to what is done once every connection has closed; done in the order of adding. */
+/** Adds to what is done once every connection has closed; the last added is done first, so that what was opened on top of something closes before it. */
 export function onShutdown(act: () => Promise<void>): void {
 	acts.push(act);
 }
@@ -22,11 +22,11 @@ export function armShutdown(): void {
 	process.once('SIGINT', stop);
 	process.once('sveltekit:shutdown', () => {
 		stop();
-		void runActs();
+		void closeAll();
 	});
 }
 
-/** One act that fails must not keep the ones after it, the pool above all, from closing. */
-async function runActs(): Promise<void> {
-	for (const act of acts) await act().catch(() => undefined);
+/** Does what was added, once. One act that fails must not keep the ones after it, the pool above all, from closing. */
+export async function closeAll(): Promise<void> {
+	for (let act = acts.pop(); act; act = acts.pop()) await act().catch(() => undefined);
 }

@@ -1,0 +1,51 @@
+import { z } from 'zod';
+import { qualityJson } from '#lib/domain/quality.ts';
+import { findTrend } from '#lib/pipeline/store/find-trend.ts';
+import { qualitySchema } from '#lib/server/feed/answer-schema.ts';
+import { api } from '#lib/server/http/api.ts';
+import { intParam, timeParam } from '#lib/server/http/parameters.ts';
+import { badParameter, Problem } from '#lib/server/http/problem.ts';
+import { toRfc3339 } from '#lib/server/http/rfc3339.ts';
+import { findTag } from '#lib/server/tags/find-tags.ts';
+
+const DAY_MS = 86_400_000;
+
+export const GET = api(
+	{
+		summary: 'The course of one tag in at most `points` spans; the last day unless a range is given.',
+		permission: 'site:read',
+		query: z.strictObject({ from: timeParam.optional(), to: timeParam.optional(), points: intParam(1, 10_000).default(500) }),
+		answer: z.object({
+			unit: z.string(),
+			items: z.array(
+				z.object({
+					at: z.iso.datetime(),
+					min: z.number().nullable(),
+					max: z.number().nullable(),
+					mean: z.number().nullable(),
+					n: z.number().int(),
+					worst: qualitySchema,
+				}),
+			),
+		}),
+	},
+	async ({ db, pool, site, params, query }) => {
+		const to = query.to ?? Date.now();
+		const from = query.from ?? to - DAY_MS;
+		if (from >= to) throw badParameter('from', 'a time before `to`');
+		const tag = await findTag(db, site.id, params.name);
+		if (!tag) throw new Problem(404, 'tag-not-found', 'No published tag at this site has that name.');
+		const { buckets } = await findTrend(pool, tag.id, from, to, query.points);
+		return {
+			unit: tag.unit,
+			items: buckets.map(({ at, min, max, mean, n, worst }) => ({
+				at: toRfc3339(at),
+				min,
+				max,
+				mean,
+				n,
+				worst: qualityJson(worst),
+			})),
+		};
+	},
+);
