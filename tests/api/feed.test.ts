@@ -95,7 +95,8 @@ describe('the feed', () => {
 describe('the stream', () => {
 	/** Events until `count` of them came. */
 	async function events(answer: Response, count: number): Promise<Record<string, string>[]> {
-		const reader = (answer.body ?? new ReadableStream<Uint8Array>()).pipeThrough(new TextDecoderStream()).getReader();
+		const reader = (answer.body ?? new ReadableStream<Uint8Array>()).getReader();
+		const decoder = new TextDecoder();
 		let text = '';
 		const parse = () =>
 			text
@@ -106,7 +107,7 @@ describe('the stream', () => {
 		while (parse().length < count) {
 			const { done, value } = await reader.read();
 			if (done) break;
-			text += value;
+			text += decoder.decode(value, { stream: true });
 		}
 		await reader.cancel();
 		return parse();
