@@ -1,0 +1,109 @@
+// Edge: collector. Test values that stand, by their persisted deadline. May touch: test-value table; hands test readings to the pipeline.
+import { STATUS_CODES } from '#lib/domain/quality.ts';
+import { freshState, judge, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
+import type { Pipeline } from '#lib/pipeline/pipeline.ts';
+import type { Pool } from '#lib/server/db/pool.ts';
+
+interface Standing {
+	id: number;
+	tagId: number;
+	value: number;
+	until: number;
+	judging: JudgingState;
+	saidAt: number;
+}
+
+/** While one stands it is said again this often, so that a receiver which joined late sees it too. */
+const AGAIN_MS = 10_000;
+
+export class TestValues {
+	readonly #pool: Pool;
+	readonly #pipeline: Pipeline;
+	readonly #standing = new Map<number, Standing>();
+
+	constructor(pool: Pool, pipeline: Pipeline) {
+		this.#pool = pool;
+		this.#pipeline = pipeline;
+	}
+
+	/** Looks what stands now among this collector's tags; true readings go on being stored and judged beside it. */
+	async look(): Promise<void> {
+		const found = await this.#pool.query<{ id: number; tag_id: number; value: number; until: Date }>(
+			'SELECT DISTINCT ON (tag_id) id, tag_id, value, until FROM test_values WHERE ended_at IS NULL AND until > clock_timestamp() ORDER BY tag_id, id DESC',
+		);
+		const now = new Map(found.rows.map((row) => [row.tag_id, row]));
+		for (const [tagId, standing] of this.#standing) if (now.get(tagId)?.id !== standing.id) this.#end(standing);
+		for (const row of found.rows) {
+			if (!this.#pipeline.tags.has(row.tag_id)) continue;
+			const standing = this.#standing.get(row.tag_id) ?? {
+				id: row.id,
+				tagId: row.tag_id,
+				value: row.value,
+				until: row.until.getTime(),
+				judging: freshState(),
+				saidAt: -Infinity,
+			};
+			this.#standing.set(row.tag_id, standing);
+			if (performance.now() - standing.saidAt >= AGAIN_MS) this.#say(standing);
+		}
+	}
+
+	#say(standing: Standing): void {
+		const tag = this.#pipeline.tags.get(standing.tagId);
+		if (!tag) return;
+		standing.saidAt = performance.now();
+		this.#pipeline.add((pending, clock) => {
+			const { siteId, tagId } = tag.plan;
+			const quality = STATUS_CODES.GoodLocalOverride;
+			pending.testReadings.push({ siteId, tagId, at: clock.now, value: standing.value, quality });
+			const judged = judge(
+				{
+					tagId,
+					at: clock.now,
+					value: standing.value,
+					quality,
+					timeFrom: 'hub',
+					receivedAt: clock.now,
+					sourceAt: null,
+					reason: 'test-value',
+					raw: null,
+					wire: null,
+					revision: tag.plan.revision,
+				},
+				tag.plan,
+				standing.judging,
+				{ now: clock.now },
+			);
+			standing.judging = judged.state;
+			for (const change of judged.changes) pending.alarmChanges.push({ ...change, tagId, siteId, isTest: true });
+		});
+	}
+
+	/** The test is over: alarms that it raised clear with it. */
+	#end(standing: Standing): void {
+		this.#standing.delete(standing.tagId);
+		const tag = this.#pipeline.tags.get(standing.tagId);
+		if (!tag) return;
+		this.#pipeline.add((pending, clock) => {
+			for (const [direction, alarm] of Object.entries(standing.judging.open)) {
+				if (!alarm) continue;
+				pending.alarmChanges.push({
+					kind: 'cleared',
+					direction: direction as 'up',
+					limitKind: 'high',
+					level: alarm.level,
+					levelNow: null,
+					at: clock.now,
+					raisedAt: alarm.raisedAt,
+					value: null,
+					isUncertain: false,
+					limitId: 0,
+					isLate: false,
+					isTest: true,
+					tagId: standing.tagId,
+					siteId: tag.plan.siteId,
+				});
+			}
+		});
+	}
+}

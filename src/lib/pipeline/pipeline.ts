@@ -1,0 +1,246 @@
+// Edge: pipeline. Lists the stages in order: decode → normalize → judge → deadband → write; one bounded queue; sheds load visibly, never silently.
+import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
+import { log } from '#lib/server/log.ts';
+import type { EmitAnswer, Sample } from '#lib/pipeline/sources/source.ts';
+import type { CopyWriter } from '#lib/pipeline/store/copy-writer.ts';
+import { rawEdgeOf } from '#lib/pipeline/store/partitions.ts';
+import type { FeedEvent, TagAlarmChange, StoredReading, WriteBatch } from '#lib/pipeline/store/write-batch.ts';
+import { TagRuntime, type Sink, type StageClock, type TagMemory } from './tag-runtime.ts';
+
+/** A commit at least this often, and at least every so many readings. */
+const FLUSH_MS = 100;
+const FLUSH_READINGS = 10_000;
+/** Most readings that wait for the database in memory; what comes beyond is dropped, counted and shown. */
+const MOST_WAITING = 200_000;
+/** Latest values are written at most once a second a tag, confirmations more rarely: they change only an age. */
+const LATEST_MS = 1_000;
+const CONFIRM_MS = 5_000;
+const RETRY_MS = 500;
+
+export interface PipelineCounts {
+	/** Readings committed since the start. */
+	stored: number;
+	duplicates: number;
+	deadLetters: number;
+	dropped: number;
+	waiting: number;
+	/** Samples taken since the start. */
+	taken: number;
+}
+
+interface Pending extends Sink {
+	readings: StoredReading[];
+	alarmChanges: TagAlarmChange[];
+	events: FeedEvent[];
+	testReadings: { siteId: number; tagId: number; at: number; value: number; quality: number }[];
+	judging: Set<TagRuntime>;
+	resolvers: ((answer: EmitAnswer) => void)[];
+}
+
+/** The middle of a reading's journey, for all sources of this process. */
+export class Pipeline {
+	readonly counts: PipelineCounts = { stored: 0, duplicates: 0, deadLetters: 0, dropped: 0, waiting: 0, taken: 0 };
+	readonly tags = new Map<number, TagRuntime>();
+	readonly #writer: CopyWriter;
+	readonly #now: () => number;
+	#pending: Pending;
+	#latest = new Set<TagRuntime>();
+	#confirmed = new Set<TagRuntime>();
+	#latestAt = 0;
+	#confirmedAt = 0;
+	#timer: NodeJS.Timeout | undefined;
+	#writing: Promise<void> | null = null;
+	#isDown = false;
+
+	constructor(writer: CopyWriter, now: () => number) {
+		this.#writer = writer;
+		this.#now = now;
+		this.#pending = this.#fresh();
+	}
+
+	#fresh(): Pending {
+		const judging = new Set<TagRuntime>();
+		return {
+			readings: [],
+			alarmChanges: [],
+			events: [],
+			testReadings: [],
+			judging,
+			resolvers: [],
+			touchJudging: (tag) => judging.add(tag),
+			touchLatest: (tag) => this.#latest.add(tag),
+			touchConfirmed: (tag) => this.#confirmed.add(tag),
+		};
+	}
+
+	/** True while the database does not take what is written. */
+	get isDown(): boolean {
+		return this.#isDown;
+	}
+
+	clock(): StageClock {
+		const now = this.#now();
+		return { now, mono: performance.now(), rawEdge: rawEdgeOf(now) };
+	}
+
+	/** Takes a tag up, or its new plan; a tag that was running keeps what it remembers. */
+	setTag(plan: TagPlan, memory: TagMemory): TagRuntime {
+		const known = this.tags.get(plan.tagId);
+		if (known) {
+			const isOtherValue = known.plan.unit !== plan.unit || known.plan.detector !== plan.detector;
+			if (!isOtherValue) {
+				known.plan = plan;
+				return known;
+			}
+		}
+		const tag = new TagRuntime(plan, known ? { judging: null, latest: null } : memory, performance.now());
+		this.tags.set(plan.tagId, tag);
+		return tag;
+	}
+
+	/** Lets a tag go; what of it is waiting is still written. */
+	dropTag(tagId: number): void {
+		const tag = this.tags.get(tagId);
+		if (!tag) return;
+		this.tags.delete(tagId);
+		this.#latest.delete(tag);
+		this.#confirmed.delete(tag);
+	}
+
+	/**
+	 * Takes samples through the stages. The answer comes with the commit that holds them, so that a source may acknowledge;
+	 * when too much waits already, they are dropped and the answer says so.
+	 */
+	accept(samples: readonly Sample[], onSample?: (isUsable: boolean) => void): Promise<EmitAnswer> {
+		this.counts.taken += samples.length;
+		if (this.counts.waiting + samples.length > MOST_WAITING) {
+			this.counts.dropped += samples.length;
+			return Promise.resolve({ dropped: samples.length, reason: 'the database has been away too long and the queue is full' });
+		}
+		const clock = this.clock();
+		const pending = this.#pending;
+		const companion = (tagId: number) => this.tags.get(tagId)?.lastRaw;
+		// Companions first: a value is judged by the age and status that came with it.
+		for (const sample of samples) {
+			const tag = this.tags.get(sample.key);
+			if (!tag) continue;
+			const isUsable = tag.take(sample, companion, clock, pending);
+			onSample?.(isUsable);
+		}
+		this.#schedule(pending);
+		return new Promise((resolve) => pending.resolvers.push(resolve));
+	}
+
+	/** Work that is not a source's sample: going stale, test values, events. */
+	add(work: (pending: Sink & { events: FeedEvent[]; testReadings: Pending['testReadings'] }, clock: StageClock) => void): void {
+		work(this.#pending, this.clock());
+		this.#schedule(this.#pending);
+	}
+
+	#schedule(pending: Pending): void {
+		this.counts.waiting = pending.readings.length + (this.#writing ? this.#writingCount : 0);
+		if (pending.readings.length >= FLUSH_READINGS && !this.#writing) {
+			clearTimeout(this.#timer);
+			this.#timer = undefined;
+			void this.#flush();
+			return;
+		}
+		this.#timer ??= setTimeout(() => {
+			this.#timer = undefined;
+			void this.#flush();
+		}, FLUSH_MS);
+	}
+
+	#writingCount = 0;
+
+	async #flush(): Promise<void> {
+		if (this.#writing) return;
+		const pending = this.#pending;
+		const isLatestDue = performance.now() - this.#latestAt >= LATEST_MS;
+		const isConfirmDue = performance.now() - this.#confirmedAt >= CONFIRM_MS;
+		const hasWork =
+			pending.readings.length +
+				pending.alarmChanges.length +
+				pending.events.length +
+				pending.testReadings.length +
+				pending.judging.size +
+				pending.resolvers.length >
+			0;
+		if (!hasWork && !(isLatestDue && this.#latest.size > 0)) {
+			if (this.#latest.size > 0) this.#schedule(pending);
+			return;
+		}
+		this.#pending = this.#fresh();
+		const latest = isLatestDue ? this.#latest : new Set<TagRuntime>();
+		if (isLatestDue) {
+			this.#latest = new Set();
+			this.#latestAt = performance.now();
+		}
+		const confirmed = isConfirmDue ? this.#confirmed : new Set<TagRuntime>();
+		if (isConfirmDue) {
+			this.#confirmed = new Set();
+			this.#confirmedAt = performance.now();
+		}
+		const batch: WriteBatch = {
+			readings: pending.readings,
+			alarmChanges: pending.alarmChanges,
+			events: pending.events,
+			testReadings: pending.testReadings,
+			judgingStates: [...pending.judging].flatMap((tag) => (tag.judging ? [{ tagId: tag.plan.tagId, state: tag.judging }] : [])),
+			latest: [...latest].flatMap((tag) => (tag.latest ? [tag.latest] : [])),
+			confirmations: [...confirmed].flatMap((tag) =>
+				tag.latest ? [{ tagId: tag.plan.tagId, confirmedAt: tag.latest.confirmedAt, verdict: tag.latest.verdict }] : [],
+			),
+		};
+		for (const tag of latest) if (tag.latest?.resets) tag.latest = { ...tag.latest, resets: false };
+		this.#writingCount = batch.readings.length;
+		this.#writing = this.#write(batch, pending.resolvers);
+		await this.#writing;
+		this.#writing = null;
+		this.#writingCount = 0;
+		this.counts.waiting = this.#pending.readings.length;
+		const next = this.#pending;
+		if (next.readings.length + next.resolvers.length > 0 || this.#latest.size > 0) this.#schedule(next);
+	}
+
+	/** Writes until it is written: what was taken is not let go because the database is away. */
+	async #write(batch: WriteBatch, resolvers: Pending['resolvers']): Promise<void> {
+		for (;;) {
+			try {
+				const result = await this.#writer.write(batch);
+				this.counts.stored += result.stored;
+				this.counts.duplicates += result.duplicates;
+				this.counts.deadLetters += result.deadLetters;
+				if (this.#isDown) log.info('the database takes what is written again');
+				this.#isDown = false;
+				for (const resolve of resolvers) resolve('stored');
+				return;
+			} catch (error) {
+				if (!this.#isDown) log.error({ error: (error as Error).message }, 'readings cannot be written; they wait in memory');
+				this.#isDown = true;
+				if (this.#isClosing) {
+					this.counts.dropped += batch.readings.length;
+					for (const resolve of resolvers)
+						resolve({ dropped: batch.readings.length, reason: 'stopped while the database was away' });
+					return;
+				}
+				await new Promise((resolve) => setTimeout(resolve, RETRY_MS));
+			}
+		}
+	}
+
+	#isClosing = false;
+
+	/** Writes what is left; with the database away it gives up after `graceMs` and counts what is lost. */
+	async close(graceMs = 5_000): Promise<void> {
+		const limit = setTimeout(() => (this.#isClosing = true), graceMs);
+		clearTimeout(this.#timer);
+		this.#latestAt = 0;
+		this.#confirmedAt = 0;
+		while (this.#writing) await this.#writing;
+		await this.#flush();
+		while (this.#writing) await this.#writing;
+		clearTimeout(limit);
+		clearTimeout(this.#timer);
+	}
+}
