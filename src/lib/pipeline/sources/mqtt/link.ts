@@ -78,8 +78,8 @@ export function openLink(options: LinkOptions): SourceLink {
 	const samplesOf = (messages: readonly Message[], find: RouteTopic): Sample[] => {
 		const samples: Sample[] = [];
 		for (const message of messages) {
-			// An empty retained payload is a topic cleared, not a value [MQTT-3.3.1-10].
-			if (message.isRetained && message.payload.length === 0) continue;
+			// An empty payload clears a retained topic and is no value [MQTT-3.3.1-10]; those who listen get it without the flag.
+			if (message.payload.length === 0) continue;
 			const routes = find(message.topic);
 			if (routes.length === 0) notWanted(message.topic);
 			for (const { key, hasTime } of routes) {

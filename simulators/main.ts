@@ -1,0 +1,43 @@
+// Edge: simulators. May touch: protocol servers, domain.
+import { startControlPort } from './control/control-port.ts';
+import { startMqttSimulator } from './mqtt/mqtt-simulator.ts';
+import { readPorts } from './ports.ts';
+import { startReceiverSimulator } from './receiver/receiver-simulator.ts';
+import { createPlant } from './scenario/plant.ts';
+import { startSmtpSimulator } from './smtp/smtp-simulator.ts';
+
+process.title = 'millrace-simulators';
+
+/** One seed for the plant everywhere, so that the numbers are the same after every start. */
+const SEED = 1_485;
+
+const ports = readPorts(process.env);
+const plant = createPlant(SEED);
+const mqtt = await startMqttSimulator({ port: ports.mqtt, plant });
+const smtp = await startSmtpSimulator({ port: ports.smtp });
+const receiver = await startReceiverSimulator({ port: ports.receiver });
+const control = await startControlPort({
+	port: ports.control,
+	plant,
+	mqtt,
+	smtp,
+	receiver,
+	actions: { 'mqtt-drop': () => mqtt.dropConnections() },
+});
+const running: { stop(): Promise<void> }[] = [control, receiver, smtp, mqtt];
+
+process.stdout.write(
+	`simulators ready: MQTT ${mqtt.port}, SMTP ${smtp.port}, receiver ${receiver.port}, control ${control.port}\n`,
+);
+
+let isEnding = false;
+const end = () => {
+	if (isEnding) return;
+	isEnding = true;
+	Promise.allSettled(running.map((one) => one.stop())).then(
+		() => process.exit(0),
+		() => process.exit(1),
+	);
+};
+process.on('SIGTERM', end);
+process.on('SIGINT', end);
