@@ -47,20 +47,20 @@ async function identify(event: RequestEvent): Promise<void> {
 	locals.sessionId = found?.sessionId ?? null;
 }
 
-/** Throws unless the route's rule lets the request through; a route without a rule lets nobody. */
-function obeyRule(event: RequestEvent, routeId: string): void {
+/** Why the route's rule does not let the request through, or null; a route without a rule lets nobody. Throws the redirect to /sign-in. */
+function refusalOf(event: RequestEvent, routeId: string): { status: 403 | 404; message: string } | null {
 	const rule = findRouteRule(routeId);
-	if (rule === null) error(403, 'No rule says who may see this.');
-	if (rule === 'public' || rule === 'api') return;
+	if (rule === null) return { status: 403, message: 'No rule says who may see this.' };
+	if (rule === 'public' || rule === 'api') return null;
 	const { actor } = event.locals;
 	if (actor?.kind !== 'person') {
 		rememberPage(event);
 		redirect(303, '/sign-in');
 	}
-	if (rule === 'signed-in') return;
+	if (rule === 'signed-in') return null;
 	const site = event.params.site ?? null;
-	if (site !== null && !canSeeSite(actor, site)) error(404, 'There is no such page.');
-	if (!can(actor, rule.permission, site)) error(403, 'Your role does not include this.');
+	if (site !== null && !canSeeSite(actor, site)) return { status: 404, message: 'There is no such page.' };
+	return can(actor, rule.permission, site) ? null : { status: 403, message: 'Your role does not include this.' };
 }
 
 const HEADERS: Readonly<Record<string, string>> = {
@@ -103,9 +103,13 @@ export const handle: Handle = async ({ event, resolve }) => {
 			begun,
 		);
 	}
-	if (routeId !== null) obeyRule(event, routeId);
+	const refusal = routeId === null ? null : refusalOf(event, routeId);
+	const isReading = event.request.method === 'GET' || event.request.method === 'HEAD';
+	if (refusal && !isReading) error(refusal.status, refusal.message);
 
 	const response = await resolve(event);
+	// A page refuses by itself, inside its own frame; where it should forget to, what it made is thrown away here.
+	if (refusal && response.status < 400) error(refusal.status, refusal.message);
 	if (isApi && response.status === 405) {
 		const allow = response.headers.get('allow') ?? '';
 		const problem = new Problem(405, 'method-not-allowed', `This address takes ${allow}.`, { headers: { allow } });

@@ -111,8 +111,8 @@ export async function saveLimits(pool: Pool, input: SaveLimitsInput): Promise<Sa
 				note: input.note,
 			});
 		}
-		// The collector takes limits up with the map.
-		await db.execute(sql`select pg_notify('millrace_map', ${String(input.siteId)})`);
+		// Collectors take them up within a second or two.
+		await db.execute(sql`select pg_notify('millrace_limits', ${String(input.siteId)})`);
 		return { ok: true, revision, changedTags: changed.map((tag) => tag.name) };
 	});
 }
