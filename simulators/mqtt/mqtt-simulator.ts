@@ -2,6 +2,7 @@
 import { createServer, type Server, type Socket } from 'node:net';
 import { Aedes } from 'aedes';
 import type { Plant } from '../scenario/plant.ts';
+import { topicOf } from './topic.ts';
 
 export interface MqttSimulator {
 	readonly port: number;
@@ -19,12 +20,6 @@ export interface MqttSimulatorOptions {
 	publishes?: boolean;
 	now?: () => number;
 	tickMs?: number;
-}
-
-/** Topic of a wired value: site/area/machine/leaf, lower case, such as saltmere/high-lift/hl-3/flow. */
-export function topicOf(signal: { site: string; area: string; path: string }): string {
-	const [name = '', leaf = ''] = signal.path.split('.');
-	return [signal.site, signal.area.replaceAll(' ', '-'), name, leaf].join('/').toLowerCase();
 }
 
 /** A broker on 127.0.0.1 with the pump hall's publishers inside. */
