@@ -77,7 +77,7 @@ export function needFact(need: Need): string {
 	if (need.alarm) return alarmFact(need.alarm);
 	if (need.source) {
 		const stale = need.source.stale > 0 ? `${counted(need.source.stale, 'tag')} stale` : null;
-		const check = need.source.check?.replace(/\.$/, '') ?? null;
+		const check = need.source.check?.replace(/\.$/, '').replace(/^[A-Z](?=[a-z])/, (first) => first.toLowerCase()) ?? null;
 		return [need.source.text?.replace(/\.$/, '') ?? (need.source.state === 'lost' ? 'no answer' : 'answers late'), stale, check]
 			.filter(Boolean)
 			.join('; ');

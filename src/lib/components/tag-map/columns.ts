@@ -1,4 +1,5 @@
 // Pure.
+import { unitText } from '../state/format-value.ts';
 import { CLOSED_LISTS, ROW_DEFAULTS, type MapField, type MapRow } from '#lib/domain/tag-map/row.ts';
 
 /** A column of the grid: a field of a row, with its head and its width. */
@@ -109,6 +110,7 @@ export function cellText(row: MapRow, field: MapField): string {
 	if (field === 'table') return String(value).replace('-', ' ');
 	if (field === 'detector' || field === 'raw_detector') return value === 'none' ? '' : String(value).replaceAll('-', ' ');
 	if (field === 'axis' && value === 'none') return '';
+	if (field === 'unit' || field === 'raw_unit') return unitText(String(value));
 	return String(value);
 }
 
@@ -116,7 +118,7 @@ export function cellText(row: MapRow, field: MapField): string {
 export function defaultText(row: MapRow, field: MapField): string {
 	if (field === 'word_order') return row.register == null ? '' : 'high first';
 	if (field === 'byte_order') return row.register == null ? '' : 'big';
-	if (field === 'raw_unit') return row.unit ?? '';
+	if (field === 'raw_unit') return unitText(row.unit);
 	if (field === 'raw_detector') return row.detector && row.detector !== 'none' ? row.detector.replaceAll('-', ' ') : '';
 	if (field === 'scale' || field === 'offset' || field === 'interval_ms') return String(ROW_DEFAULTS[field]);
 	return '';

@@ -60,11 +60,11 @@ export function explainReceiver(
 	if (final !== null && final !== 0) {
 		for (const twist of TWISTS) {
 			if (close(shown, final * twist.factor))
-				return { hop: twistHop(hops), words: `${formatValue(shown)} is the hub's value ${twist.words}` };
+				return { hop: twistHop(hops), words: `${formatValue(shown)} is the hub’s value ${twist.words}` };
 		}
-		if (close(shown, final * 1.8 + 32)) return { hop: twistHop(hops), words: `${formatValue(shown)} is the hub's value in °F` };
+		if (close(shown, final * 1.8 + 32)) return { hop: twistHop(hops), words: `${formatValue(shown)} is the hub’s value in °F` };
 		if (close(shown, (final - 32) / 1.8))
-			return { hop: twistHop(hops), words: `${formatValue(shown)} is the hub's value taken as °F and turned into °C` };
+			return { hop: twistHop(hops), words: `${formatValue(shown)} is the hub’s value taken as °F and turned into °C` };
 		if (close(shown, -final)) return { hop: twistHop(hops), words: 'the receiver has the sign turned round' };
 	}
 	return {

@@ -11,7 +11,6 @@ const at = (permission: Permission): RouteRule => ({ permission });
 
 /** Every route there is, by Kit's route id. A route that is not here is refused. */
 export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
-	'/': 'signed-in',
 	'/(app)': 'signed-in',
 	'/(public)/sign-in': 'public',
 	'/(public)/sign-out': 'public',
