@@ -265,7 +265,7 @@ export class SourceRun {
 		await this.counts.write(this.#options.pool, {
 			id: this.plan.id,
 			state: this.state,
-			advice: this.state === 'ok' ? null : this.advice,
+			advice: this.advice ?? this.link?.advice ?? null,
 			tags: tags.length,
 			staleTags: tags.filter((tag) => tag.isStale).length,
 			duplicates: tags.reduce((sum, tag) => sum + tag.duplicates, 0),

@@ -7,7 +7,7 @@ import { judgeLate } from '#lib/pipeline/evaluate/judge-late.ts';
 import { shouldStore, type LastStored } from '#lib/pipeline/normalize/deadband.ts';
 import { normalize, type NormalizeContext } from '#lib/pipeline/normalize/normalize.ts';
 import { rawToStore } from '#lib/pipeline/normalize/raw-to-store.ts';
-import type { Sample } from '#lib/pipeline/sources/source.ts';
+import type { Fault, Sample } from '#lib/pipeline/sources/source.ts';
 import type { LatestUpdate, StoredReading, TagAlarmChange } from '#lib/pipeline/store/write-batch.ts';
 
 /** What a tag remembered before this process began. */
@@ -35,6 +35,12 @@ export interface StageClock {
 
 /** Two looks at one measurement by its age in whole seconds differ by at most this. */
 const AGE_JITTER_MS = 2_000;
+
+/** A fault that means nobody answered; any other bad reading is still word from the device. */
+function isSilence(fault: Fault | null): boolean {
+	if (!fault) return false;
+	return fault.code === 'exception' ? fault.exception === 10 || fault.exception === 11 : fault.code === 'no-answer' || fault.code === 'no-connection' || fault.code === 'source-offline';
+}
 
 export class TagRuntime {
 	plan: TagPlan;
@@ -77,7 +83,7 @@ export class TagRuntime {
 		}
 		const isUsable = severityOf(reading.quality) !== 'bad';
 		// A retained message may be of any age: it says what the value was, not that the source lives.
-		if (isUsable && !sample.retained) this.aliveMono = clock.mono;
+		if (!sample.retained && (isUsable || !isSilence(sample.fault))) this.aliveMono = clock.mono;
 		const last = this.#last;
 		if (last && reading.at === last.at && reading.value === last.value && reading.quality === last.quality) {
 			this.duplicates += 1;

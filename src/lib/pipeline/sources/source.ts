@@ -61,6 +61,8 @@ export interface SourceLink {
 	setAddresses(wanted: readonly WantedAddress[]): Promise<readonly AddressResult[]>;
 	/** Resolves once `signal` has aborted and everything taken is handed over; rejects when the link is lost. */
 	readonly closed: Promise<void>;
+	/** What is wrong while the link itself stands: a silent unit, a refused address; null when all is well. */
+	readonly advice?: Advice | null;
 	/** Over the running connection, so that a device with one socket is not asked for a second. */
 	test?(signal: AbortSignal): Promise<TestReport>;
 	browse?(node: string | null, signal: AbortSignal): Promise<BrowseItem[]>;

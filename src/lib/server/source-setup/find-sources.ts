@@ -61,15 +61,22 @@ export interface SourceHealth {
 	exchanges: { at: string; direction: 'out' | 'in' | 'none'; bytes: string; meaning: string; failed: boolean }[];
 }
 
+type HealthRow = Omit<SourceHealth, 'since' | 'last_good_at' | 'subscribed_at' | 'minutes' | 'events' | 'exchanges'> & {
+	since: Date;
+	last_good_at: Date | null;
+	subscribed_at: Date | null;
+	is_owned: boolean | null;
+};
+
 const text = (at: Date | null) => at?.toISOString() ?? null;
 
 /** How a source is, with its counts by minute over [from, to), its last events and the exchanges around failures. */
 export async function findHealth(pool: Pool, source: SourceShown, range: { from: number; to: number }): Promise<SourceHealth> {
-	const health = await pool.query(
+	const health = await pool.query<HealthRow>(
 		`SELECT h.*, (SELECT until > clock_timestamp() FROM source_leases l WHERE l.source_id = h.source_id AND l.owner IS NOT NULL) AS is_owned FROM source_health h WHERE source_id = $1`,
 		[source.id],
 	);
-	const row = health.rows[0] as Record<string, never> | undefined;
+	const row = health.rows[0];
 	const minutes = await pool.query(
 		'SELECT * FROM source_minutes WHERE source_id = $1 AND minute >= $2 AND minute < $3 ORDER BY minute LIMIT 10000',
 		[source.id, new Date(range.from).toISOString(), new Date(range.to).toISOString()],
