@@ -174,3 +174,20 @@ it('latest lists every tag with the cursor before the read; one without a readin
 	expect((await get<FeedAnswer>(`${at}/feed?after=${first.cursor}`)).items).toEqual([]);
 	expect((await app.ask(`${at}/latest?tags=nowhere`, { key })).status).toBe(400);
 });
+
+it('a trace lays out the stations of the reading at or just before a time, and says when there is none', async () => {
+	const trace = await get<{ value: number; at: string; hops: { hop: string }[] }>(`${at}/tags/A/trace?at=${iso(BEGIN + 5_500)}`);
+	expect([trace.value, trace.at]).toEqual([5, new Date(BEGIN + 5_000).toISOString()]);
+	expect(trace.hops.map(({ hop }) => hop).slice(0, 7)).toEqual([
+		'wire',
+		'decode',
+		'scale',
+		'convert',
+		'quality',
+		'verdict',
+		'stored',
+	]);
+	const none = await app.ask(`${at}/tags/A/trace?at=${iso(BEGIN - 1)}`, { key });
+	expect([none.status, (await none.json()).code]).toEqual([404, 'no-reading']);
+	expect((await app.ask(`${at}/tags/nowhere/trace`, { key })).status).toBe(404);
+});
