@@ -1,5 +1,5 @@
 // Pure.
-import type { GlyphState } from '../state/StateGlyph.svelte';
+import type { GlyphState } from '../state/glyph-state.ts';
 
 /** What a source is reached by, in words: `Modbus TCP · gateway-b, port 502`. */
 export function sourceWay(kind: string, settings: Record<string, unknown>): string {

@@ -28,7 +28,7 @@ export type TimeForm = 'clock' | 'minute' | 'exact' | 'day' | 'full';
  * A moment in the site's zone. `clock` 14:22:05, `minute` 14:22, `exact` 14:22:05.082, `day` 30 Nov,
  * `full` 30 Nov 2026 14:22:05. `clock` and `minute` put the day in front when it is not today.
  */
-export function formatTime(ms: number, timeZone: string, form: TimeForm = 'clock', now = Date.now()): string {
+export function formatTime(ms: number, timeZone: string, form: TimeForm, now: number): string {
 	const p = partsOf(ms, timeZone);
 	const today = partsOf(now, timeZone);
 	const day = `${p.day} ${p.month?.slice(0, 3)}`;
