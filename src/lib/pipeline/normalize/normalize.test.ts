@@ -15,7 +15,6 @@ const NOW = Date.UTC(2026, 11, 1, 12, 0, 0);
 function plan(extra: Partial<MapRow> = {}, rest: Partial<TagPlan> = {}): TagPlan {
 	const compiled = compileRow(
 		{
-			id: 7,
 			tag: 'HL-3.MDE.H.VEL',
 			unit_id: 4,
 			table: 'input-register',
@@ -27,6 +26,7 @@ function plan(extra: Partial<MapRow> = {}, rest: Partial<TagPlan> = {}): TagPlan
 			raw_detector: 'derived-peak',
 			scale: 0.01,
 			...extra,
+			id: 7,
 		},
 		{
 			siteId: 1,

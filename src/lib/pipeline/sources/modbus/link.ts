@@ -51,7 +51,7 @@ export class ModbusLink {
 			transport === 'rtu'
 				? client.connectRTUBuffered(path ?? '', { baudRate: baudRate ?? 19_200 })
 				: transport === 'rtu-over-tcp'
-					? client.connectTcpRTUBuffered(host ?? '', where)
+					? client.connectTelnet(host ?? '', where)
 					: client.connectTCP(host ?? '', where);
 		try {
 			await Promise.race([opening, late]);
