@@ -18,6 +18,8 @@ export interface Pulse {
 	collector_alive: boolean;
 	/** Rises when anything in the overview changed. */
 	change: string;
+	/** Rates of the last minute, in the first beat only. */
+	trace?: number[];
 }
 
 const TRACE_LENGTH = 49;
@@ -76,7 +78,7 @@ export class PulseFeed {
 			this.lostSince = null;
 			this.skewMs = Date.now() - pulse.at;
 			this.now = pulse;
-			this.trace = [...this.trace, pulse.readings_per_s].slice(-TRACE_LENGTH);
+			this.trace = (pulse.trace ?? [...this.trace, pulse.readings_per_s]).slice(-TRACE_LENGTH);
 		});
 	}
 }
