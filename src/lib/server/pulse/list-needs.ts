@@ -81,7 +81,7 @@ WHERE t.site_id = $1 AND t.quantity = 'battery' AND t.unit = '%' AND t.retired_a
 ORDER BY l.value LIMIT 20`;
 
 const DRAFT = `
-SELECT d.base_revision AS base, d.updated_at, d.updated_by, count(r.tag_id)::int AS changed
+SELECT coalesce((SELECT max(m.revision) FROM map_revisions m WHERE m.site_id = d.site_id), 0) AS base, d.updated_at, d.updated_by, count(r.tag_id)::int AS changed
 FROM map_drafts d LEFT JOIN draft_rows r ON r.site_id = d.site_id
 WHERE d.site_id = $1 GROUP BY d.site_id`;
 
