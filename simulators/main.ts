@@ -1,5 +1,6 @@
 // Edge: simulators. May touch: protocol servers, domain.
 import { startControlPort } from './control/control-port.ts';
+import { startGateway } from './modbus/gateway-b.ts';
 import { startMqttSimulator } from './mqtt/mqtt-simulator.ts';
 import { readPorts } from './ports.ts';
 import { startReceiverSimulator } from './receiver/receiver-simulator.ts';
@@ -14,6 +15,8 @@ const SEED = 1_485;
 const ports = readPorts(process.env);
 const plant = createPlant(SEED);
 const mqtt = await startMqttSimulator({ port: ports.mqtt, plant });
+const gatewayB = await startGateway({ port: ports.modbus, plant, gateway: 'b' });
+const boilerHouse = await startGateway({ port: ports.rtu, plant, gateway: 'rtu' });
 const smtp = await startSmtpSimulator({ port: ports.smtp });
 const receiver = await startReceiverSimulator({ port: ports.receiver });
 const control = await startControlPort({
@@ -24,10 +27,10 @@ const control = await startControlPort({
 	receiver,
 	actions: { 'mqtt-drop': () => mqtt.dropConnections() },
 });
-const running: { stop(): Promise<void> }[] = [control, receiver, smtp, mqtt];
+const running: { stop(): Promise<void> }[] = [control, receiver, smtp, gatewayB, boilerHouse, mqtt];
 
 process.stdout.write(
-	`simulators ready: MQTT ${mqtt.port}, SMTP ${smtp.port}, receiver ${receiver.port}, control ${control.port}\n`,
+	`simulators ready: Modbus ${gatewayB.port} and ${boilerHouse.port}, MQTT ${mqtt.port}, SMTP ${smtp.port}, receiver ${receiver.port}, control ${control.port}\n`,
 );
 
 let isEnding = false;

@@ -27,12 +27,14 @@ export function keepRunning(
 		startedAt = Date.now();
 		child = run();
 		onStart();
-		for (const stream of [child.stdout, child.stderr]) {
+		const started = child;
+		for (const stream of [started.stdout, started.stderr]) {
 			let rest = '';
 			stream?.setEncoding('utf8').on('data', (text: string) => {
 				const lines = (rest + text).split('\n');
 				rest = lines.pop() ?? '';
-				for (const line of lines) if (line) onLine(name, line);
+				// Standard output is for log lines; greetings of servers are nobody's news.
+				for (const line of lines) if (line.startsWith('{') || (line && stream === started.stderr)) onLine(name, line);
 			});
 		}
 		child.on('error', (error) => onLine(name, `could not be started: ${error.message}`));
