@@ -4,6 +4,7 @@ import { startGateway } from './modbus/gateway-b.ts';
 import { startMqttSimulator } from './mqtt/mqtt-simulator.ts';
 import { readPorts } from './ports.ts';
 import { startReceiverSimulator } from './receiver/receiver-simulator.ts';
+import { startGatewayA } from './opcua/gateway-a.ts';
 import { createPlant } from './scenario/plant.ts';
 import { startSmtpSimulator } from './smtp/smtp-simulator.ts';
 
@@ -17,6 +18,7 @@ const plant = createPlant(SEED);
 const mqtt = await startMqttSimulator({ port: ports.mqtt, plant });
 const gatewayB = await startGateway({ port: ports.modbus, plant, gateway: 'b' });
 const boilerHouse = await startGateway({ port: ports.rtu, plant, gateway: 'rtu' });
+const gatewayA = await startGatewayA({ port: ports.opcua, plant });
 const smtp = await startSmtpSimulator({ port: ports.smtp });
 const receiver = await startReceiverSimulator({ port: ports.receiver });
 const control = await startControlPort({
@@ -27,10 +29,10 @@ const control = await startControlPort({
 	receiver,
 	actions: { 'mqtt-drop': () => mqtt.dropConnections() },
 });
-const running: { stop(): Promise<void> }[] = [control, receiver, smtp, gatewayB, boilerHouse, mqtt];
+const running: { stop(): Promise<void> }[] = [control, receiver, smtp, gatewayA, gatewayB, boilerHouse, mqtt];
 
 process.stdout.write(
-	`simulators ready: Modbus ${gatewayB.port} and ${boilerHouse.port}, MQTT ${mqtt.port}, SMTP ${smtp.port}, receiver ${receiver.port}, control ${control.port}\n`,
+	`simulators ready: OPC UA ${gatewayA.port}, Modbus ${gatewayB.port} and ${boilerHouse.port}, MQTT ${mqtt.port}, SMTP ${smtp.port}, receiver ${receiver.port}, control ${control.port}\n`,
 );
 
 let isEnding = false;
