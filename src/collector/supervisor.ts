@@ -79,7 +79,6 @@ export class Supervisor {
 		// A lease that could not be renewed belongs to somebody else, or the source is off: stop at once.
 		for (const id of lost) await this.#drop(id);
 		if (won.length > 0) {
-			this.#fingerprint = '';
 			void this.look();
 		}
 	}
@@ -104,10 +103,12 @@ export class Supervisor {
 
 	async #lookOnce(): Promise<void> {
 		const { pool } = this.#options;
-		const fingerprint = await readFingerprint(pool);
+		// What is held counts too: a lease may be won while a round is under way.
+		const held = [...this.#held].sort();
+		const fingerprint = `${await readFingerprint(pool)} ${held.join(' ')}`;
 		if (fingerprint !== this.#fingerprint) {
 			await this.#options.prepare?.();
-			const plans = await loadPlans(pool, [...this.#held]);
+			const plans = await loadPlans(pool, held);
 			await this.#apply(plans);
 			this.#fingerprint = fingerprint;
 		}

@@ -20,7 +20,9 @@ describe('a freshly migrated database', () => {
 	});
 
 	it('lets the application add and read audit entries, and never change or remove one', async () => {
-		await pool.query("INSERT INTO audit_entries (actor_kind, actor_name, action, subject_kind) VALUES ('system', 'test', 'site.created', 'site')");
+		await pool.query(
+			"INSERT INTO audit_entries (actor_kind, actor_name, action, subject_kind) VALUES ('system', 'test', 'site.created', 'site')",
+		);
 		expect((await pool.query('SELECT count(*)::int AS n FROM audit_entries')).rows[0].n).toBe(1);
 		await expect(pool.query("UPDATE audit_entries SET actor_name = 'x'")).rejects.toThrow(/permission denied/);
 		await expect(pool.query('DELETE FROM audit_entries')).rejects.toThrow(/permission denied/);
