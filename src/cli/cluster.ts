@@ -107,6 +107,8 @@ export function prepareCluster(
 		const folder = secrets?.folder ?? placeOf(dataFolder, user);
 		// A first start that was cut off leaves half a cluster; without PG_VERSION it holds nothing.
 		if (existsSync(folder) && !existsSync(join(folder, 'PG_VERSION'))) rmSync(folder, { recursive: true, force: true });
+		// The way there must be open to PostgreSQL's user; only the cluster itself is closed.
+		mkdirSync(dirname(folder), { recursive: true, mode: 0o755 });
 		mkdirSync(folder, { recursive: true, mode: 0o700 });
 		chmodSync(folder, 0o700);
 		secrets = { owner: randomBytes(24).toString('hex'), app: randomBytes(24).toString('hex'), folder };

@@ -1,6 +1,6 @@
 // Tests. Starts the product as `npm start` does, on free ports and in a throwaway data folder; ends it afterwards.
 import { type ChildProcess, spawn } from 'node:child_process';
-import { mkdtempSync, rmSync, writeFileSync } from 'node:fs';
+import { chmodSync, mkdtempSync, rmSync, writeFileSync } from 'node:fs';
 import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { freePort } from '../support/cluster.ts';
@@ -17,6 +17,7 @@ export interface Product {
 
 export default async function start(): Promise<() => Promise<void>> {
 	const dataFolder = mkdtempSync(join(tmpdir(), 'millrace-e2e-'));
+	chmodSync(dataFolder, 0o755);
 	const names = [
 		'PORT',
 		'MILLRACE_PG_PORT',
