@@ -61,7 +61,7 @@ test('an integrator adds three sources by hand, maps a tag from each, publishes 
 		'tag,source,unit,quantity,node_id,unit_id,table,register,data_type,interval_ms,topic,value_pointer,time_pointer',
 		'INTAKE.TEMP,Intake gateway,Cel,temperature,nsu=urn:saltmere:gateway-a;s=HL-1.MDE.TEMP,,,,,1000,,,',
 		'INTAKE.COUNT,Intake panel,1,count,,1,input-register,7,uint16,500,,,',
-		'INTAKE.FLOW,Intake broker,m3/h,flow,,,,,,5000,saltmere/dosing/B-2/FLOW,/value,/time',
+		'INTAKE.FLOW,Intake broker,m3/h,flow,,,,,,5000,saltmere/dosing/b-2/flow,/value,/time',
 	].join('\r\n');
 	await page.getByRole('button', { name: 'Import' }).first().click();
 	await page.locator('input[type=file]').setInputFiles({ name: 'intake.csv', mimeType: 'text/csv', buffer: Buffer.from(csv) });
