@@ -24,6 +24,7 @@ const emptyMinute = (): Minute => ({ good: 0, bad: 0, requests: 0, failures: 0, 
 export class SourceCounts implements SourceObserver {
 	good = 0;
 	bad = 0;
+	duplicates = 0;
 	dropped = 0;
 	requests = 0;
 	failures = 0;
@@ -81,7 +82,8 @@ export class SourceCounts implements SourceObserver {
 		this.clockSkewMs = ms;
 	}
 
-	sample(isUsable: boolean): void {
+	sample(isUsable: boolean, isDuplicate: boolean): void {
+		if (isDuplicate) this.duplicates += 1;
 		if (isUsable) {
 			this.good += 1;
 			this.#minute.good += 1;
@@ -106,7 +108,7 @@ export class SourceCounts implements SourceObserver {
 	/** Writes what stands and what is new. Counters go on from what earlier owners wrote. */
 	async write(
 		pool: Pool,
-		source: { id: string; state: HealthState; advice: Advice | null; tags: number; staleTags: number; duplicates: number },
+		source: { id: string; state: HealthState; advice: Advice | null; tags: number; staleTags: number },
 	): Promise<void> {
 		const iso = (at: number | null) => (at === null ? null : new Date(at).toISOString());
 		const now = {
@@ -116,7 +118,7 @@ export class SourceCounts implements SourceObserver {
 			failures: this.failures,
 			reconnects: this.reconnects,
 			dropped: this.dropped,
-			duplicates: source.duplicates,
+			duplicates: this.duplicates,
 		};
 		const plus = (key: keyof typeof now) => now[key] - this.#written[key];
 		await pool.query(

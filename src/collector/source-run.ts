@@ -35,6 +35,9 @@ export class SourceRun {
 	#finished: Promise<void> = Promise.resolve();
 	#startedMono = performance.now();
 	#isAlarmed: boolean | null = null;
+	/** Suppressed stale alarms that the connection alarm tells of. */
+	#toldSuppressed = 0;
+	#linkedMono = 0;
 	#temporary: WantedAddress[] = [];
 	#temporarySamples: ((sample: Sample) => void) | null = null;
 
@@ -125,6 +128,7 @@ export class SourceRun {
 				const source = await this.#options.create(this.plan, this.counts);
 				this.link = await source.open((samples) => this.#emit(samples), signal);
 				this.counts.subscribedAt = this.#options.now();
+				this.#linkedMono = performance.now();
 				this.counts.event('note', 'connected', 'the connection stands');
 				this.advice = null;
 				lastCode = '';
@@ -188,7 +192,7 @@ export class SourceRun {
 				return false;
 			});
 		}
-		const answer = await this.#options.pipeline.accept(own, (isUsable) => this.counts.sample(isUsable));
+		const answer = await this.#options.pipeline.accept(own, (isUsable, isDuplicate) => this.counts.sample(isUsable, isDuplicate));
 		if (typeof answer === 'object') {
 			this.counts.dropped += answer.dropped;
 			this.counts.event('error', 'dropped', `${answer.dropped} samples dropped: ${answer.reason}`);
@@ -214,6 +218,12 @@ export class SourceRun {
 				for (const tag of overdue) tag.goStale(clock, pending, isLost || this.link === null);
 			});
 		}
+		// The source is back and this tag is not: its own alarm is no consequence of a lost source any more.
+		const left =
+			isLost || this.link === null
+				? []
+				: tags.filter((tag) => tag.isSuppressed && mono - this.#linkedMono > tag.plan.staleAfterS * 1_000);
+		if (left.length > 0) pipeline.add((pending) => left.forEach((tag) => tag.raiseStale(pending)));
 		const stale = staleBefore + overdue.length;
 		const before = this.state;
 		if (isLost) this.state = 'lost';
@@ -231,9 +241,10 @@ export class SourceRun {
 		const { pool, pipeline } = this.#options;
 		const { now } = pipeline.clock();
 		const source = { sourceId: this.plan.id, siteId: this.plan.siteId, at: now, suppressed };
-		if (this.state === 'lost' && this.#isAlarmed !== true) {
+		if (this.state === 'lost' && (this.#isAlarmed !== true || suppressed > this.#toldSuppressed)) {
 			const isNew = await raiseConnectionAlarm(pool, source);
 			this.#isAlarmed = true;
+			this.#toldSuppressed = suppressed;
 			if (isNew)
 				pipeline.add((pending) =>
 					pending.events.push({
@@ -247,6 +258,7 @@ export class SourceRun {
 		} else if ((this.state === 'ok' || this.state === 'late') && this.#isAlarmed !== false && this.counts.lastGoodAt !== null) {
 			const wasOpen = await clearConnectionAlarm(pool, source);
 			this.#isAlarmed = false;
+			this.#toldSuppressed = 0;
 			if (wasOpen)
 				pipeline.add((pending) =>
 					pending.events.push({
@@ -268,7 +280,6 @@ export class SourceRun {
 			advice: this.advice ?? this.link?.advice ?? null,
 			tags: tags.length,
 			staleTags: tags.filter((tag) => tag.isStale).length,
-			duplicates: tags.reduce((sum, tag) => sum + tag.duplicates, 0),
 		});
 	}
 }

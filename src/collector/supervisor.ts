@@ -23,6 +23,8 @@ export interface SupervisorOptions {
 
 const LOOK_MS = 1_000;
 const HEALTH_MS = 2_000;
+/** How long sources may take to hand over what they took before the pipeline closes all the same. */
+const STOP_MS = 3_000;
 
 export class Supervisor {
 	readonly runs = new Map<string, SourceRun>();
@@ -118,13 +120,16 @@ export class Supervisor {
 	async #apply(plans: readonly SourcePlan[]): Promise<void> {
 		const { pool, pipeline } = this.#options;
 		const wanted = new Set(plans.map((plan) => plan.id));
+		// A tag that moved to another source of ours is kept, whichever of the two comes first.
+		const kept = new Set(plans.flatMap((plan) => plan.plans.map((tag) => tag.tagId)));
 		for (const id of [...this.runs.keys()]) if (!wanted.has(id)) await this.#drop(id);
 		const fresh = plans.flatMap((plan) => plan.plans.filter((tag) => !pipeline.tags.has(tag.tagId)).map((tag) => tag.tagId));
 		const memories = await loadMemories(pool, fresh);
 		for (const plan of plans) {
 			if (this.#isStopped) return;
+			// Lost while the plans were read: it is somebody else's now.
+			if (!this.#held.has(plan.id)) continue;
 			const run = this.runs.get(plan.id);
-			const kept = new Set(plan.plans.map((tag) => tag.tagId));
 			for (const old of run?.plan.plans ?? []) if (!kept.has(old.tagId)) pipeline.dropTag(old.tagId);
 			for (const tag of plan.plans) pipeline.setTag(tag, memories.get(tag.tagId) ?? { judging: null, latest: null });
 			if (run && run.plan.version === plan.version) {
@@ -168,9 +173,12 @@ export class Supervisor {
 	async stop(): Promise<void> {
 		this.#isStopped = true;
 		for (const timer of this.#timers) clearInterval(timer);
-		await Promise.all([...this.runs.values()].map((run) => run.stop()));
-		for (const run of this.runs.values()) await run.writeHealth().catch(() => undefined);
+		const stopped = Promise.all([...this.runs.values()].map((run) => run.stop()));
+		// A source waits until what it took is stored; with the database away only the pipeline's close ends that wait.
+		await Promise.race([stopped, new Promise((resolve) => setTimeout(resolve, STOP_MS).unref())]);
 		await this.#options.pipeline.close();
+		await Promise.race([stopped, new Promise((resolve) => setTimeout(resolve, STOP_MS).unref())]);
+		for (const run of this.runs.values()) await run.writeHealth().catch(() => undefined);
 		await releaseLeases(this.#options.pool, this.#options.owner).catch(() => undefined);
 	}
 }

@@ -37,6 +37,18 @@ interface Pending extends Sink {
 	resolvers: ((answer: EmitAnswer) => void)[];
 }
 
+function hasWork(pending: Pending): boolean {
+	return (
+		pending.readings.length +
+			pending.alarmChanges.length +
+			pending.events.length +
+			pending.testReadings.length +
+			pending.judging.size +
+			pending.resolvers.length >
+		0
+	);
+}
+
 /** The middle of a reading's journey, for all sources of this process. */
 export class Pipeline {
 	readonly counts: PipelineCounts = { stored: 0, duplicates: 0, deadLetters: 0, dropped: 0, waiting: 0, taken: 0 };
@@ -111,7 +123,7 @@ export class Pipeline {
 	 * Takes samples through the stages. The answer comes with the commit that holds them, so that a source may acknowledge;
 	 * when too much waits already, they are dropped and the answer says so.
 	 */
-	accept(samples: readonly Sample[], onSample?: (isUsable: boolean) => void): Promise<EmitAnswer> {
+	accept(samples: readonly Sample[], onSample?: (isUsable: boolean, isDuplicate: boolean) => void): Promise<EmitAnswer> {
 		this.counts.taken += samples.length;
 		if (this.counts.waiting + samples.length > MOST_WAITING) {
 			this.counts.dropped += samples.length;
@@ -124,8 +136,11 @@ export class Pipeline {
 		for (const sample of samples) {
 			const tag = this.tags.get(sample.key);
 			if (!tag) continue;
+			const known = tag.duplicates;
 			const isUsable = tag.take(sample, companion, clock, pending);
-			onSample?.(isUsable);
+			const isDuplicate = tag.duplicates > known;
+			if (isDuplicate) this.counts.duplicates += 1;
+			onSample?.(isUsable, isDuplicate);
 		}
 		this.#schedule(pending);
 		return new Promise((resolve) => pending.resolvers.push(resolve));
@@ -158,15 +173,7 @@ export class Pipeline {
 		const pending = this.#pending;
 		const isLatestDue = performance.now() - this.#latestAt >= LATEST_MS;
 		const isConfirmDue = performance.now() - this.#confirmedAt >= CONFIRM_MS;
-		const hasWork =
-			pending.readings.length +
-				pending.alarmChanges.length +
-				pending.events.length +
-				pending.testReadings.length +
-				pending.judging.size +
-				pending.resolvers.length >
-			0;
-		if (!hasWork && !(isLatestDue && this.#latest.size > 0)) {
+		if (!hasWork(pending) && !(isLatestDue && this.#latest.size > 0)) {
 			if (this.#latest.size > 0) this.#schedule(pending);
 			return;
 		}
@@ -200,7 +207,7 @@ export class Pipeline {
 		this.#writingCount = 0;
 		this.counts.waiting = this.#pending.readings.length;
 		const next = this.#pending;
-		if (next.readings.length + next.resolvers.length > 0 || this.#latest.size > 0) this.#schedule(next);
+		if (hasWork(next) || this.#latest.size > 0) this.#schedule(next);
 	}
 
 	/** Writes until it is written: what was taken is not let go because the database is away. */

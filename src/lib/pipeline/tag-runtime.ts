@@ -39,7 +39,9 @@ const AGE_JITTER_MS = 2_000;
 /** A fault that means nobody answered; any other bad reading is still word from the device. */
 function isSilence(fault: Fault | null): boolean {
 	if (!fault) return false;
-	return fault.code === 'exception' ? fault.exception === 10 || fault.exception === 11 : fault.code === 'no-answer' || fault.code === 'no-connection' || fault.code === 'source-offline';
+	return fault.code === 'exception'
+		? fault.exception === 10 || fault.exception === 11
+		: fault.code === 'no-answer' || fault.code === 'no-connection' || fault.code === 'source-offline';
 }
 
 export class TagRuntime {
@@ -56,7 +58,9 @@ export class TagRuntime {
 	/** The stale alarm was suppressed as a consequence of its lost source. */
 	isSuppressed = false;
 	#lastStored: LastStored | null = null;
-	#last: Reading | null = null;
+	/** The newest reading; kept while stale, since the source may say that it still stands. */
+	#last: Pick<Reading, 'at' | 'value' | 'quality' | 'receivedAt'> | null = null;
+	#heldBack: TagAlarmChange[] = [];
 
 	constructor(plan: TagPlan, memory: TagMemory, mono: number) {
 		this.plan = plan;
@@ -64,11 +68,13 @@ export class TagRuntime {
 		this.latest = memory.latest;
 		this.aliveMono = mono;
 		this.isStale = memory.latest?.isStale ?? false;
+		// A source that reports changes says its last value again after a restart: that is no new reading.
+		if (memory.latest && !this.isStale) this.#last = memory.latest;
 	}
 
 	/** Takes one sample through decode, normalize, judge and deadband. Answers whether it brought a usable value. */
 	take(sample: Sample, companion: NormalizeContext['companion'], clock: StageClock, sink: Sink): boolean {
-		if (sample.confirms) return this.#confirm(clock, sink);
+		if (sample.confirms) return this.isStale ? this.#standAgain(sample, clock, sink) : this.#confirm(clock, sink);
 		const context: NormalizeContext = {
 			now: clock.now,
 			rawEdge: clock.rawEdge,
@@ -84,8 +90,12 @@ export class TagRuntime {
 		const isUsable = severityOf(reading.quality) !== 'bad';
 		// A retained message may be of any age: it says what the value was, not that the source lives.
 		if (!sample.retained && (isUsable || !isSilence(sample.fault))) this.aliveMono = clock.mono;
+		if (this.isStale && isUsable && !sample.retained && this.latest?.at === reading.at && this.latest.value === reading.value) {
+			this.#judgeAndStore(readAgain(reading), sample, clock, sink);
+			return true;
+		}
 		const last = this.#last;
-		if (last && reading.at === last.at && reading.value === last.value && reading.quality === last.quality) {
+		if (!this.isStale && last && reading.at === last.at && reading.value === last.value && reading.quality === last.quality) {
 			this.duplicates += 1;
 			return this.#confirm(clock, sink) || isUsable;
 		}
@@ -95,7 +105,7 @@ export class TagRuntime {
 	}
 
 	/** Polled again before the sensor has measured again: the same value is the same measurement. */
-	#isSameMeasurement(reading: Reading, last: Reading, sample: Sample): boolean {
+	#isSameMeasurement(reading: Reading, last: Pick<Reading, 'at' | 'value' | 'quality' | 'receivedAt'>, sample: Sample): boolean {
 		if (this.isStale || reading.value !== last.value || reading.quality !== last.quality) return false;
 		if (this.plan.ageTagId !== null && Math.abs(reading.at - last.at) <= AGE_JITTER_MS) return true;
 		return (
@@ -130,6 +140,7 @@ export class TagRuntime {
 		this.#last = reading;
 		this.isStale = false;
 		this.isSuppressed = false;
+		this.#heldBack = [];
 		this.latest = {
 			tagId: plan.tagId,
 			at: reading.at,
@@ -150,6 +161,29 @@ export class TagRuntime {
 		sink.touchLatest(this);
 	}
 
+	/** A stale tag's source confirms its last value: the value stands again, and receivers that were told of the silence are told so. */
+	#standAgain(sample: Sample, clock: StageClock, sink: Sink): boolean {
+		const { latest } = this;
+		const last = this.#last;
+		if (!latest || !last || latest.value === null || severityOf(last.quality) === 'bad') return false;
+		this.aliveMono = clock.mono;
+		const reading: Reading = {
+			tagId: this.plan.tagId,
+			at: last.at,
+			value: latest.value,
+			quality: last.quality,
+			timeFrom: latest.isHubTime ? 'hub' : 'source',
+			receivedAt: Math.floor(sample.receivedAt),
+			sourceAt: latest.sourceAt,
+			reason: null,
+			raw: this.lastRaw ?? null,
+			wire: latest.wire,
+			revision: this.plan.revision,
+		};
+		this.#judgeAndStore(readAgain(reading), sample, clock, sink);
+		return true;
+	}
+
 	#confirm(clock: StageClock, sink: Sink): boolean {
 		const { latest } = this;
 		if (!latest || severityOf(latest.quality) === 'bad' || this.isStale) return false;
@@ -168,6 +202,13 @@ export class TagRuntime {
 			}
 		}
 		return true;
+	}
+
+	/** Raises the stale alarm that was held back while its source was lost. */
+	raiseStale(sink: Sink): void {
+		this.isSuppressed = false;
+		sink.alarmChanges.push(...this.#heldBack);
+		this.#heldBack = [];
 	}
 
 	/** True when nothing has come for the stale time. */
@@ -197,13 +238,11 @@ export class TagRuntime {
 		};
 		sink.readings.push(reading);
 		this.#lastStored = { at: clock.now, value: null, quality: reading.quality };
-		this.#last = null;
 		if (this.judging && plan.limits.length > 0) {
 			const { state, changes } = goStale(this.judging, plan, clock.now);
 			this.judging = state;
-			if (!suppress)
-				for (const change of changes)
-					sink.alarmChanges.push({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false });
+			this.#heldBack = changes.map((change) => ({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false }));
+			if (!suppress) this.raiseStale(sink);
 			sink.touchJudging(this);
 		}
 		if (this.latest) {
@@ -235,4 +274,10 @@ export class TagRuntime {
 		}
 		sink.touchLatest(this);
 	}
+}
+
+/** The last value, said again after a silence. Its identity is stored already, so it stands at the time it was read again, its own time kept beside it. */
+function readAgain(reading: Reading): Reading {
+	if (reading.timeFrom === 'hub') return { ...reading, at: reading.receivedAt };
+	return { ...reading, at: reading.receivedAt, timeFrom: 'hub', sourceAt: reading.at };
 }
