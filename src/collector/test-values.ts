@@ -1,7 +1,10 @@
 // Edge: collector. Test values that stand, by their persisted deadline. May touch: test-value table; hands test readings to the pipeline.
+import type { AlarmDirection, LimitLevel } from '#lib/domain/limit.ts';
 import { STATUS_CODES } from '#lib/domain/quality.ts';
 import { freshState, judge, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
+import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
 import type { Pipeline } from '#lib/pipeline/pipeline.ts';
+import type { TagAlarmChange } from '#lib/pipeline/store/write-batch.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 
 interface Standing {
@@ -32,6 +35,7 @@ export class TestValues {
 			'SELECT DISTINCT ON (tag_id) id, tag_id, value, until FROM test_values WHERE ended_at IS NULL AND until > clock_timestamp() ORDER BY tag_id, id DESC',
 		);
 		const now = new Map(found.rows.map((row) => [row.tag_id, row]));
+		await this.#clearOrphans();
 		for (const [tagId, standing] of this.#standing) if (now.get(tagId)?.id !== standing.id) this.#end(standing);
 		for (const row of found.rows) {
 			if (!this.#pipeline.tags.has(row.tag_id)) continue;
@@ -46,6 +50,23 @@ export class TestValues {
 			this.#standing.set(row.tag_id, standing);
 			if (performance.now() - standing.saidAt >= AGAIN_MS) this.#say(standing);
 		}
+	}
+
+	/** Alarms of tests that ended while no collector ran. */
+	async #clearOrphans(): Promise<void> {
+		const own = [...this.#pipeline.tags.keys()].filter((tagId) => !this.#standing.has(tagId));
+		const left = await this.#pool.query<{ tag_id: number; direction: AlarmDirection; level: LimitLevel; raised_at: Date }>(
+			`SELECT tag_id, direction, level, raised_at FROM alarms WHERE is_test AND cleared_at IS NULL AND tag_id = ANY($1::int[])
+				AND NOT EXISTS (SELECT FROM test_values v WHERE v.tag_id = alarms.tag_id AND v.ended_at IS NULL AND v.until > clock_timestamp())`,
+			[own],
+		);
+		if (left.rows.length === 0) return;
+		this.#pipeline.add((pending, clock) => {
+			for (const alarm of left.rows) {
+				const tag = this.#pipeline.tags.get(alarm.tag_id);
+				if (tag) pending.alarmChanges.push(endOfTest(tag.plan, alarm.direction, alarm.level, alarm.raised_at.getTime(), clock.now));
+			}
+		});
 	}
 
 	#say(standing: Standing): void {
@@ -87,23 +108,28 @@ export class TestValues {
 		this.#pipeline.add((pending, clock) => {
 			for (const [direction, alarm] of Object.entries(standing.judging.open)) {
 				if (!alarm) continue;
-				pending.alarmChanges.push({
-					kind: 'cleared',
-					direction: direction as 'up',
-					limitKind: 'high',
-					level: alarm.level,
-					levelNow: null,
-					at: clock.now,
-					raisedAt: alarm.raisedAt,
-					value: null,
-					isUncertain: false,
-					limitId: 0,
-					isLate: false,
-					isTest: true,
-					tagId: standing.tagId,
-					siteId: tag.plan.siteId,
-				});
+				pending.alarmChanges.push(endOfTest(tag.plan, direction as AlarmDirection, alarm.level, alarm.raisedAt, clock.now));
 			}
 		});
 	}
+}
+
+/** An alarm that a test raised ends with it. */
+function endOfTest(plan: TagPlan, direction: AlarmDirection, level: LimitLevel, raisedAt: number, at: number): TagAlarmChange {
+	return {
+		kind: 'cleared',
+		direction,
+		limitKind: 'high',
+		level,
+		levelNow: null,
+		at,
+		raisedAt,
+		value: null,
+		isUncertain: false,
+		limitId: 0,
+		isLate: false,
+		isTest: true,
+		tagId: plan.tagId,
+		siteId: plan.siteId,
+	};
 }

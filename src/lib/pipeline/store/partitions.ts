@@ -1,5 +1,6 @@
 // Edge: store. May touch: pool; partition functions of the database.
 import type { Client, Pool } from '#lib/server/db/pool.ts';
+import { inTransaction } from '#lib/server/db/transaction.ts';
 
 const DAY_MS = 86_400_000;
 /** Days kept ready ahead of now; maintenance runs hourly, so a week of it may fail before anything is missed. */
@@ -78,8 +79,21 @@ export async function dropExpired(pool: Pool, now: number, retention: Retention 
 		dropped += answer.rows[0]?.n ?? 0;
 	}
 	// What the journal no longer holds is below every cursor's reach.
-	await pool.query(
-		`UPDATE feed_heads h SET oldest = greatest(h.oldest, coalesce((SELECT min(j.first_position) - 1 FROM feed_journal j WHERE j.site_id = h.site_id), h.position))`,
-	);
+	const sites = await pool.query<{ site_id: number }>('SELECT site_id FROM feed_heads ORDER BY site_id');
+	for (const { site_id: siteId } of sites.rows) await moveOldest(pool, siteId);
 	return dropped;
+}
+
+/** Moves a site's oldest place up to what its journal still holds. */
+async function moveOldest(pool: Pool, siteId: number): Promise<void> {
+	await inTransaction(pool, async (_, client) => {
+		// The head is locked first: a statement that waited for a writer would see its new position beside a journal without its row.
+		await client.query('SELECT 1 FROM feed_heads WHERE site_id = $1 FOR UPDATE', [siteId]);
+		await client.query(
+			`UPDATE feed_heads h SET oldest = kept.oldest
+			 FROM (SELECT coalesce((SELECT min(first_position) - 1 FROM feed_journal WHERE site_id = $1), (SELECT position FROM feed_heads WHERE site_id = $1)) AS oldest) kept
+			 WHERE h.site_id = $1 AND h.oldest < kept.oldest`,
+			[siteId],
+		);
+	});
 }

@@ -9,7 +9,8 @@ let db: Db | undefined;
 export function webPool(): Pool {
 	if (!pool) {
 		const { databaseUrl } = readConfig();
-		if (!databaseUrl) throw new Error('DATABASE_URL is not set: start with `npm start`, or give the address of a PostgreSQL database');
+		if (!databaseUrl)
+			throw new Error('DATABASE_URL is not set: start with `npm start`, or give the address of a PostgreSQL database');
 		pool = createPool(databaseUrl, { name: 'millrace-web', max: 20 });
 	}
 	return pool;

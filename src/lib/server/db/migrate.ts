@@ -8,7 +8,11 @@ const MIGRATION_LOCK = 7_261_403;
 
 /** Brings a database to the newest schema. Processes that start together take turns by an advisory lock. Needs the owner's address. */
 export async function migrateDatabase(ownerUrl: string, folder: string): Promise<void> {
-	const client = new pg.Client({ connectionString: ownerUrl, application_name: 'millrace migrate', connectionTimeoutMillis: 10_000 });
+	const client = new pg.Client({
+		connectionString: ownerUrl,
+		application_name: 'millrace migrate',
+		connectionTimeoutMillis: 10_000,
+	});
 	await client.connect();
 	try {
 		await client.query('SELECT pg_advisory_lock($1)', [MIGRATION_LOCK]);

@@ -1,6 +1,19 @@
 // Schema. May touch: drizzle-orm and other schema files only.
 import { sql } from 'drizzle-orm';
-import { bigint, boolean, check, doublePrecision, index, integer, jsonb, pgTable, text, timestamp, uniqueIndex, uuid } from 'drizzle-orm/pg-core';
+import {
+	bigint,
+	boolean,
+	check,
+	doublePrecision,
+	index,
+	integer,
+	jsonb,
+	pgTable,
+	text,
+	timestamp,
+	uniqueIndex,
+	uuid,
+} from 'drizzle-orm/pg-core';
 import { sites } from './site.ts';
 import { sources } from './source.ts';
 import { limits, tags } from './tag-map.ts';
@@ -12,7 +25,9 @@ export const alarms = pgTable(
 	'alarms',
 	{
 		id: bigint('id', { mode: 'number' }).primaryKey().generatedAlwaysAsIdentity(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		/** Null for a connection alarm. */
 		tagId: integer('tag_id').references(() => tags.id),
 		/** Set for a connection alarm: the source that is lost. */
@@ -42,9 +57,15 @@ export const alarms = pgTable(
 	},
 	(t) => [
 		// After a restart the collector may judge the same excursion again; these keep it single.
-		uniqueIndex('alarms_one_open_per_tag_and_direction').on(t.tagId, t.direction, t.isTest).where(sql`cleared_at is null and tag_id is not null`),
-		uniqueIndex('alarms_one_open_per_source').on(t.sourceId).where(sql`cleared_at is null and source_id is not null`),
-		uniqueIndex('alarms_same_excursion_once').on(t.tagId, t.direction, t.isTest, t.raisedAt).where(sql`tag_id is not null`),
+		uniqueIndex('alarms_one_open_per_tag_and_direction')
+			.on(t.tagId, t.direction, t.isTest)
+			.where(sql`cleared_at is null and tag_id is not null`),
+		uniqueIndex('alarms_one_open_per_source')
+			.on(t.sourceId)
+			.where(sql`cleared_at is null and source_id is not null`),
+		uniqueIndex('alarms_same_excursion_once')
+			.on(t.tagId, t.direction, t.isTest, t.raisedAt)
+			.where(sql`tag_id is not null`),
 		index('alarms_by_site_and_time').on(t.siteId, t.raisedAt.desc(), t.id.desc()),
 		index('alarms_by_tag_and_time').on(t.tagId, t.raisedAt.desc()),
 		check('alarms_cleared_after_raised', sql`cleared_at is null or cleared_at >= raised_at`),
@@ -57,9 +78,13 @@ export const alarmEvents = pgTable(
 	'alarm_events',
 	{
 		id: bigint('id', { mode: 'number' }).primaryKey().generatedAlwaysAsIdentity(),
-		alarmId: bigint('alarm_id', { mode: 'number' }).notNull().references(() => alarms.id),
+		alarmId: bigint('alarm_id', { mode: 'number' })
+			.notNull()
+			.references(() => alarms.id),
 		at: at('at').notNull(),
-		kind: text('kind', { enum: ['raised', 'escalated', 'stepped-down', 'cleared', 'acknowledged', 'shelved', 'unshelved'] }).notNull(),
+		kind: text('kind', {
+			enum: ['raised', 'escalated', 'stepped-down', 'cleared', 'acknowledged', 'shelved', 'unshelved'],
+		}).notNull(),
 		level: text('level'),
 		value: doublePrecision('value'),
 		by: text('by'),
@@ -70,7 +95,9 @@ export const alarmEvents = pgTable(
 
 /** Shelved until, suppressed and out of service are the tag's, not the alarm's. */
 export const tagStates = pgTable('tag_states', {
-	tagId: integer('tag_id').primaryKey().references(() => tags.id),
+	tagId: integer('tag_id')
+		.primaryKey()
+		.references(() => tags.id),
 	shelvedUntil: at('shelved_until'),
 	shelvedBy: text('shelved_by'),
 	shelvedNote: text('shelved_note'),
@@ -81,7 +108,9 @@ export const tagStates = pgTable('tag_states', {
 
 /** What evaluation must remember of a tag between readings (pending delays, runs, last judged time), written with the readings that made it. */
 export const judgingStates = pgTable('judging_states', {
-	tagId: integer('tag_id').primaryKey().references(() => tags.id),
+	tagId: integer('tag_id')
+		.primaryKey()
+		.references(() => tags.id),
 	state: jsonb('state').notNull(),
 	updatedAt: at('updated_at').notNull().defaultNow(),
 });
@@ -91,8 +120,12 @@ export const testValues = pgTable(
 	'test_values',
 	{
 		id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
-		tagId: integer('tag_id').notNull().references(() => tags.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
+		tagId: integer('tag_id')
+			.notNull()
+			.references(() => tags.id),
 		value: doublePrecision('value').notNull(),
 		setAt: at('set_at').notNull().defaultNow(),
 		setBy: text('set_by').notNull(),

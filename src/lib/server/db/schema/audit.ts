@@ -34,7 +34,9 @@ export const outbox = pgTable(
 		channel: text('channel', { enum: ['mail', 'text', 'webhook'] }).notNull(),
 		target: text('target').notNull(),
 		payload: jsonb('payload').$type<Record<string, unknown>>().notNull(),
-		state: text('state', { enum: ['waiting', 'sent', 'failed'] }).notNull().default('waiting'),
+		state: text('state', { enum: ['waiting', 'sent', 'failed'] })
+			.notNull()
+			.default('waiting'),
 		attempts: integer('attempts').notNull().default(0),
 		nextAt: at('next_at').notNull().defaultNow(),
 		createdAt: at('created_at').notNull().defaultNow(),

@@ -7,7 +7,9 @@ const at = (name: string) => timestamp(name, { withTimezone: true, mode: 'date' 
 
 /** The newest reading of each tag by `at`, stored or not; written at most once a second a tag, moves only forward. */
 export const latest = pgTable('latest', {
-	tagId: integer('tag_id').primaryKey().references(() => tags.id),
+	tagId: integer('tag_id')
+		.primaryKey()
+		.references(() => tags.id),
 	at: at('at').notNull(),
 	/** In the tag's unit; kept when the tag goes stale. */
 	value: doublePrecision('value'),
@@ -22,7 +24,9 @@ export const latest = pgTable('latest', {
 	/** Raw scalar as text (exact for 64 bits), and bytes or payload as captured. */
 	raw: text('raw'),
 	wire: text('wire'),
-	verdict: text('verdict', { enum: ['normal', 'alert', 'danger', 'unknown'] }).notNull().default('normal'),
+	verdict: text('verdict', { enum: ['normal', 'alert', 'danger', 'unknown'] })
+		.notNull()
+		.default('normal'),
 	isStale: boolean('is_stale').notNull().default(false),
 	revision: integer('revision').notNull(),
 	updatedAt: at('updated_at').notNull().defaultNow(),
@@ -30,7 +34,9 @@ export const latest = pgTable('latest', {
 
 /** Last position given out, by site. Its row lock, taken as the last act before commit, makes one order for every reader. */
 export const feedHeads = pgTable('feed_heads', {
-	siteId: integer('site_id').primaryKey().references(() => sites.id),
+	siteId: integer('site_id')
+		.primaryKey()
+		.references(() => sites.id),
 	position: bigint('position', { mode: 'number' }).notNull().default(0),
 	/** Readings at or below this position are gone from the journal. */
 	oldest: bigint('oldest', { mode: 'number' }).notNull().default(0),
@@ -40,7 +46,9 @@ export const feedHeads = pgTable('feed_heads', {
 export const feedReaders = pgTable('feed_readers', {
 	/** Key id, or the person's session. */
 	reader: text('reader').notNull().primaryKey(),
-	siteId: integer('site_id').notNull().references(() => sites.id),
+	siteId: integer('site_id')
+		.notNull()
+		.references(() => sites.id),
 	name: text('name').notNull(),
 	position: bigint('position', { mode: 'number' }).notNull(),
 	readAt: at('read_at').notNull(),

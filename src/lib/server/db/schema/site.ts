@@ -33,7 +33,9 @@ export const areas = pgTable(
 	'areas',
 	{
 		id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		name: text('name').notNull(),
 	},
 	(t) => [uniqueIndex('areas_one_name_per_site').on(t.siteId, sql`lower(${t.name})`)],
@@ -44,7 +46,9 @@ export const machines = pgTable(
 	'machines',
 	{
 		id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		areaId: integer('area_id').references(() => areas.id),
 		name: text('name').notNull(),
 		description: text('description'),
@@ -53,14 +57,20 @@ export const machines = pgTable(
 		version: integer('version').notNull().default(1),
 		deletedAt: at('deleted_at'),
 	},
-	(t) => [uniqueIndex('machines_one_name_per_site').on(t.siteId, sql`lower(${t.name})`).where(sql`deleted_at is null`)],
+	(t) => [
+		uniqueIndex('machines_one_name_per_site')
+			.on(t.siteId, sql`lower(${t.name})`)
+			.where(sql`deleted_at is null`),
+	],
 );
 
 export const measuringPoints = pgTable(
 	'measuring_points',
 	{
 		id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-		machineId: integer('machine_id').notNull().references(() => machines.id),
+		machineId: integer('machine_id')
+			.notNull()
+			.references(() => machines.id),
 		name: text('name').notNull(),
 		description: text('description'),
 		/** Bearing number, where on the train, directions of the axes. */
@@ -72,7 +82,9 @@ export const measuringPoints = pgTable(
 /** A sensor sits at a measuring point and can be replaced without touching tags or history. */
 export const sensors = pgTable('sensors', {
 	id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-	siteId: integer('site_id').notNull().references(() => sites.id),
+	siteId: integer('site_id')
+		.notNull()
+		.references(() => sites.id),
 	pointId: integer('point_id').references(() => measuringPoints.id),
 	serial: text('serial').notNull(),
 	kind: text('kind').notNull(),

@@ -1,6 +1,19 @@
 // Schema. May touch: drizzle-orm and other schema files only.
 import { sql } from 'drizzle-orm';
-import { bigint, boolean, customType, doublePrecision, index, integer, jsonb, pgTable, text, timestamp, uniqueIndex, uuid } from 'drizzle-orm/pg-core';
+import {
+	bigint,
+	boolean,
+	customType,
+	doublePrecision,
+	index,
+	integer,
+	jsonb,
+	pgTable,
+	text,
+	timestamp,
+	uniqueIndex,
+	uuid,
+} from 'drizzle-orm/pg-core';
 import { sites } from './site.ts';
 
 const at = (name: string) => timestamp(name, { withTimezone: true, mode: 'date' });
@@ -10,7 +23,9 @@ export const sources = pgTable(
 	'sources',
 	{
 		id: uuid('id').primaryKey().defaultRandom(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		name: text('name').notNull(),
 		kind: text('kind', { enum: ['opcua', 'modbus', 'mqtt'] }).notNull(),
 		enabled: boolean('enabled').notNull().default(true),
@@ -24,7 +39,11 @@ export const sources = pgTable(
 		updatedAt: at('updated_at').notNull().defaultNow(),
 		deletedAt: at('deleted_at'),
 	},
-	(t) => [uniqueIndex('sources_one_name_per_site').on(t.siteId, sql`lower(${t.name})`).where(sql`deleted_at is null`)],
+	(t) => [
+		uniqueIndex('sources_one_name_per_site')
+			.on(t.siteId, sql`lower(${t.name})`)
+			.where(sql`deleted_at is null`),
+	],
 );
 
 /** A running collector process; `heartbeatAt` is written every 2 s. */
@@ -42,7 +61,9 @@ export const collectors = pgTable('collectors', {
 
 /** One owner a source at a time; only PostgreSQL's clock judges `until`. Term 12 s, renewed every 3 s. */
 export const sourceLeases = pgTable('source_leases', {
-	sourceId: uuid('source_id').primaryKey().references(() => sources.id),
+	sourceId: uuid('source_id')
+		.primaryKey()
+		.references(() => sources.id),
 	owner: uuid('owner'),
 	instance: text('instance'),
 	/** Rises with every change of owner. */
@@ -52,7 +73,9 @@ export const sourceLeases = pgTable('source_leases', {
 
 /** What the owner last said of the source; one row a source. */
 export const sourceHealth = pgTable('source_health', {
-	sourceId: uuid('source_id').primaryKey().references(() => sources.id),
+	sourceId: uuid('source_id')
+		.primaryKey()
+		.references(() => sources.id),
 	/** `ok`: good data in time; `late`: some tags stale; `lost`: no link or no good data; `waiting`: just started; `off`: disabled. */
 	state: text('state', { enum: ['ok', 'late', 'lost', 'waiting', 'off'] }).notNull(),
 	since: at('since').notNull().defaultNow(),
@@ -79,7 +102,9 @@ export const sourceEvents = pgTable(
 	'source_events',
 	{
 		id: bigint('id', { mode: 'number' }).primaryKey().generatedAlwaysAsIdentity(),
-		sourceId: uuid('source_id').notNull().references(() => sources.id),
+		sourceId: uuid('source_id')
+			.notNull()
+			.references(() => sources.id),
 		at: at('at').notNull().defaultNow(),
 		level: text('level', { enum: ['note', 'warning', 'error'] }).notNull(),
 		code: text('code').notNull(),
@@ -93,7 +118,9 @@ export const sourceExchanges = pgTable(
 	'source_exchanges',
 	{
 		id: bigint('id', { mode: 'number' }).primaryKey().generatedAlwaysAsIdentity(),
-		sourceId: uuid('source_id').notNull().references(() => sources.id),
+		sourceId: uuid('source_id')
+			.notNull()
+			.references(() => sources.id),
 		at: at('at').notNull(),
 		direction: text('direction', { enum: ['out', 'in', 'none'] }).notNull(),
 		bytes: text('bytes').notNull(),
@@ -125,30 +152,35 @@ export const sourceRequests = pgTable(
 	'source_requests',
 	{
 		id: uuid('id').primaryKey().defaultRandom(),
-		sourceId: uuid('source_id').notNull().references(() => sources.id),
+		sourceId: uuid('source_id')
+			.notNull()
+			.references(() => sources.id),
 		kind: text('kind', { enum: ['test', 'browse', 'read', 'reconnect'] }).notNull(),
 		params: jsonb('params').$type<Record<string, unknown>>().notNull().default({}),
 		requestedAt: at('requested_at').notNull().defaultNow(),
 		answeredAt: at('answered_at'),
 		answer: jsonb('answer').$type<Record<string, unknown>>(),
 	},
-	(t) => [index('source_requests_open').on(t.sourceId).where(sql`answered_at is null`)],
+	(t) => [
+		index('source_requests_open')
+			.on(t.sourceId)
+			.where(sql`answered_at is null`),
+	],
 );
 
 /** Server certificates seen, and what an administrator or integrator decided of them. */
-export const certificates = pgTable(
-	'certificates',
-	{
-		fingerprint: text('fingerprint').primaryKey(),
-		sourceId: uuid('source_id').references(() => sources.id),
-		subject: text('subject').notNull(),
-		issuer: text('issuer').notNull(),
-		validFrom: at('valid_from'),
-		validTo: at('valid_to'),
-		der: bytea('der').notNull(),
-		state: text('state', { enum: ['unknown', 'trusted', 'rejected'] }).notNull().default('unknown'),
-		firstSeenAt: at('first_seen_at').notNull().defaultNow(),
-		decidedAt: at('decided_at'),
-		decidedBy: text('decided_by'),
-	},
-);
+export const certificates = pgTable('certificates', {
+	fingerprint: text('fingerprint').primaryKey(),
+	sourceId: uuid('source_id').references(() => sources.id),
+	subject: text('subject').notNull(),
+	issuer: text('issuer').notNull(),
+	validFrom: at('valid_from'),
+	validTo: at('valid_to'),
+	der: bytea('der').notNull(),
+	state: text('state', { enum: ['unknown', 'trusted', 'rejected'] })
+		.notNull()
+		.default('unknown'),
+	firstSeenAt: at('first_seen_at').notNull().defaultNow(),
+	decidedAt: at('decided_at'),
+	decidedBy: text('decided_by'),
+});

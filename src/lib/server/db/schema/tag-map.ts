@@ -1,6 +1,18 @@
 // Schema. May touch: drizzle-orm and other schema files only.
 import { sql } from 'drizzle-orm';
-import { boolean, doublePrecision, index, integer, jsonb, pgTable, primaryKey, text, timestamp, uniqueIndex, uuid } from 'drizzle-orm/pg-core';
+import {
+	boolean,
+	doublePrecision,
+	index,
+	integer,
+	jsonb,
+	pgTable,
+	primaryKey,
+	text,
+	timestamp,
+	uniqueIndex,
+	uuid,
+} from 'drizzle-orm/pg-core';
 import type { MapRow } from '../../../domain/tag-map/row.ts';
 import { machines, measuringPoints, sites } from './site.ts';
 import { sources } from './source.ts';
@@ -15,7 +27,9 @@ export const tags = pgTable(
 	'tags',
 	{
 		id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		name: text('name').notNull(),
 		unit: text('unit').notNull().default('1'),
 		detector: text('detector').notNull().default('none'),
@@ -33,7 +47,9 @@ export const tags = pgTable(
 		retiredAt: at('retired_at'),
 	},
 	(t) => [
-		uniqueIndex('tags_one_live_name_per_site').on(t.siteId, sql`lower(${t.name})`).where(sql`published_at is not null and retired_at is null`),
+		uniqueIndex('tags_one_live_name_per_site')
+			.on(t.siteId, sql`lower(${t.name})`)
+			.where(sql`published_at is not null and retired_at is null`),
 		index('tags_by_site').on(t.siteId, t.id),
 		index('tags_by_source').on(t.sourceId),
 	],
@@ -41,7 +57,9 @@ export const tags = pgTable(
 
 /** One draft a site: only what differs from the published map is kept. */
 export const mapDrafts = pgTable('map_drafts', {
-	siteId: integer('site_id').primaryKey().references(() => sites.id),
+	siteId: integer('site_id')
+		.primaryKey()
+		.references(() => sites.id),
 	/** Rises with every change; the ETag. */
 	version: integer('version').notNull().default(1),
 	baseRevision: integer('base_revision').notNull().default(0),
@@ -55,8 +73,12 @@ export const mapDrafts = pgTable('map_drafts', {
 export const draftRows = pgTable(
 	'draft_rows',
 	{
-		siteId: integer('site_id').notNull().references(() => sites.id),
-		tagId: integer('tag_id').notNull().references(() => tags.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
+		tagId: integer('tag_id')
+			.notNull()
+			.references(() => tags.id),
 		row: jsonb('row').$type<MapRow>(),
 		/** Order in which new rows were added. */
 		position: integer('position').notNull().default(0),
@@ -70,7 +92,9 @@ export const draftRows = pgTable(
 export const mapRevisions = pgTable(
 	'map_revisions',
 	{
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		revision: integer('revision').notNull(),
 		publishedAt: at('published_at').notNull().defaultNow(),
 		publishedBy: text('published_by').notNull(),
@@ -87,22 +111,30 @@ export const mapRevisions = pgTable(
 export const mapRows = pgTable(
 	'map_rows',
 	{
-		siteId: integer('site_id').notNull().references(() => sites.id),
-		tagId: integer('tag_id').notNull().references(() => tags.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
+		tagId: integer('tag_id')
+			.notNull()
+			.references(() => tags.id),
 		fromRevision: integer('from_revision').notNull(),
 		toRevision: integer('to_revision'),
 		row: jsonb('row').$type<MapRow>().notNull(),
 	},
 	(t) => [
 		primaryKey({ columns: [t.siteId, t.tagId, t.fromRevision] }),
-		index('map_rows_current').on(t.siteId).where(sql`to_revision is null`),
+		index('map_rows_current')
+			.on(t.siteId)
+			.where(sql`to_revision is null`),
 	],
 );
 
 export const limitRevisions = pgTable(
 	'limit_revisions',
 	{
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		revision: integer('revision').notNull(),
 		savedAt: at('saved_at').notNull().defaultNow(),
 		savedBy: text('saved_by').notNull(),
@@ -116,8 +148,12 @@ export const limits = pgTable(
 	'limits',
 	{
 		id: integer('id').primaryKey().generatedAlwaysAsIdentity(),
-		siteId: integer('site_id').notNull().references(() => sites.id),
-		tagId: integer('tag_id').notNull().references(() => tags.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
+		tagId: integer('tag_id')
+			.notNull()
+			.references(() => tags.id),
 		kind: text('kind').notNull(),
 		level: text('level', { enum: ['alert', 'danger'] }).notNull(),
 		value: doublePrecision('value'),
@@ -127,7 +163,9 @@ export const limits = pgTable(
 		windowS: doublePrecision('window_s'),
 		baseline: jsonb('baseline').$type<{ mean: number; sigma: number; from?: string | null; to?: string | null }>(),
 		state: doublePrecision('state'),
-		origin: text('origin', { enum: ['standard', 'baseline', 'maker', 'site'] }).notNull().default('site'),
+		origin: text('origin', { enum: ['standard', 'baseline', 'maker', 'site'] })
+			.notNull()
+			.default('site'),
 		note: text('note'),
 		cause: text('cause'),
 		consequence: text('consequence'),
@@ -136,5 +174,10 @@ export const limits = pgTable(
 		fromRevision: integer('from_revision').notNull(),
 		toRevision: integer('to_revision'),
 	},
-	(t) => [index('limits_current').on(t.tagId).where(sql`to_revision is null`), index('limits_by_site').on(t.siteId)],
+	(t) => [
+		index('limits_current')
+			.on(t.tagId)
+			.where(sql`to_revision is null`),
+		index('limits_by_site').on(t.siteId),
+	],
 );

@@ -25,8 +25,12 @@ export const users = pgTable(
 export const siteRoles = pgTable(
 	'site_roles',
 	{
-		userId: text('user_id').notNull().references(() => users.id),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		userId: text('user_id')
+			.notNull()
+			.references(() => users.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 		role: text('role', { enum: ['integrator', 'controls', 'maintenance', 'analyst', 'viewer'] }).notNull(),
 	},
 	(t) => [primaryKey({ columns: [t.userId, t.siteId] })],
@@ -35,7 +39,9 @@ export const siteRoles = pgTable(
 /** `id` is the SHA-256 of the token that the cookie carries: a copy of this table opens no session. */
 export const sessions = pgTable('sessions', {
 	id: text('id').primaryKey(),
-	userId: text('user_id').notNull().references(() => users.id),
+	userId: text('user_id')
+		.notNull()
+		.references(() => users.id),
 	expiresAt: at('expires_at').notNull(),
 	createdAt: at('created_at').notNull().defaultNow(),
 	ip: text('ip'),
@@ -46,7 +52,9 @@ export const sessions = pgTable('sessions', {
 export const oneTimeTokens = pgTable('one_time_tokens', {
 	id: text('id').primaryKey(),
 	kind: text('kind', { enum: ['invite', 'reset'] }).notNull(),
-	userId: text('user_id').notNull().references(() => users.id),
+	userId: text('user_id')
+		.notNull()
+		.references(() => users.id),
 	expiresAt: at('expires_at').notNull(),
 	usedAt: at('used_at'),
 	createdAt: at('created_at').notNull().defaultNow(),
@@ -69,14 +77,23 @@ export const apiKeys = pgTable(
 		createdBy: text('created_by'),
 		createdAt: at('created_at').notNull().defaultNow(),
 	},
-	(t) => [uniqueIndex('api_keys_by_hash').on(t.keyHash), uniqueIndex('api_keys_one_live_name').on(sql`lower(${t.name})`).where(sql`revoked_at is null`)],
+	(t) => [
+		uniqueIndex('api_keys_by_hash').on(t.keyHash),
+		uniqueIndex('api_keys_one_live_name')
+			.on(sql`lower(${t.name})`)
+			.where(sql`revoked_at is null`),
+	],
 );
 
 export const apiKeySites = pgTable(
 	'api_key_sites',
 	{
-		keyId: uuid('key_id').notNull().references(() => apiKeys.id),
-		siteId: integer('site_id').notNull().references(() => sites.id),
+		keyId: uuid('key_id')
+			.notNull()
+			.references(() => apiKeys.id),
+		siteId: integer('site_id')
+			.notNull()
+			.references(() => sites.id),
 	},
 	(t) => [primaryKey({ columns: [t.keyId, t.siteId] })],
 );

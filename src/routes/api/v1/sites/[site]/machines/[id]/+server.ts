@@ -8,7 +8,13 @@ const idOf = (text: string) => (/^\d{1,9}$/.test(text) ? Number(text) : -1);
 const notFound = () => new Problem(404, 'machine-not-found', 'This site has no machine with that id.');
 
 export const PATCH = api(
-	{ summary: 'Changes a machine; what is not sent stays.', permission: 'machines:edit', body: machineChange, answer: machineJson, refusals: [409] },
+	{
+		summary: 'Changes a machine; what is not sent stays.',
+		permission: 'machines:edit',
+		body: machineChange,
+		answer: machineJson,
+		refusals: [409],
+	},
 	async ({ pool, site, params, body, actor, ip }) => {
 		const outcome = await updateMachine(pool, idOf(params.id), body, { siteId: site.id, actor, ip });
 		if (outcome.ok) return outcome.value;

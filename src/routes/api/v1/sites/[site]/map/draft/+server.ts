@@ -37,13 +37,19 @@ export const GET = api(
 );
 
 /** Rows from JSON, or from CSV with every bad cell named. */
-async function sentRows(request: Request, body: DraftBody | undefined): Promise<{ rows: SentRow[]; convert: boolean | undefined }> {
+async function sentRows(
+	request: Request,
+	body: DraftBody | undefined,
+): Promise<{ rows: SentRow[]; convert: boolean | undefined }> {
 	if (body) return { rows: body.rows.map(({ state: _, ...row }) => row as SentRow), convert: body.convert };
 	const read = csvToRows(new Uint8Array(await request.arrayBuffer()));
 	if (read.ok) return { rows: read.rows, convert: undefined };
 	throw badInput(
 		read.faults.map((fault) => ({
-			pointer: fault.row === 0 ? `/header${fault.column ? `/${fault.column}` : ''}` : `/rows/${fault.row - 1}${fault.column ? `/${fault.column}` : ''}`,
+			pointer:
+				fault.row === 0
+					? `/header${fault.column ? `/${fault.column}` : ''}`
+					: `/rows/${fault.row - 1}${fault.column ? `/${fault.column}` : ''}`,
 			detail: `row ${fault.row === 0 ? 'of the header' : fault.row}${fault.column ? `, column ${fault.column}` : ''}: ${fault.detail}`,
 		})),
 	);
@@ -68,17 +74,26 @@ async function saveDraft(mode: 'replace' | 'merge', context: SiteContext<unknown
 		case 'draft-changed':
 			throw new Problem(412, 'draft-changed', `Somebody else changed the draft: ${outcome.detail}. Read it again first.`);
 		case 'row-changed':
-			throw new Problem(409, 'row-changed', `${outcome.detail}. Nothing was saved.`, { extra: 'conflicts' in outcome ? { conflicts: outcome.conflicts } : {} });
+			throw new Problem(409, 'row-changed', `${outcome.detail}. Nothing was saved.`, {
+				extra: 'conflicts' in outcome ? { conflicts: outcome.conflicts } : {},
+			});
 		case 'unknown-row':
 		case 'tag-missing':
 			throw new Problem(409, outcome.reason, `${outcome.detail ?? ''}. Nothing was saved.`);
 	}
 }
 
-const declaration = { permission: 'map:edit', body: draftBody, bodyTypes: [CSV_TYPE], answer: checkJson, refusals: [409, 412] } as const;
+const declaration = {
+	permission: 'map:edit',
+	body: draftBody,
+	bodyTypes: [CSV_TYPE],
+	answer: checkJson,
+	refusals: [409, 412],
+} as const;
 
-export const PUT = api({ ...declaration, summary: 'Replaces the draft; rows not sent are removed from it. Answers the check.' }, (context) =>
-	saveDraft('replace', context),
+export const PUT = api(
+	{ ...declaration, summary: 'Replaces the draft; rows not sent are removed from it. Answers the check.' },
+	(context) => saveDraft('replace', context),
 );
 export const PATCH = api({ ...declaration, summary: 'Merges rows into the draft by id or tag. Answers the check.' }, (context) =>
 	saveDraft('merge', context),

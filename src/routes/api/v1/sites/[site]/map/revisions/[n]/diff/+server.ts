@@ -16,7 +16,12 @@ export const GET = api(
 		const from = /^\d{1,9}$/.test(params.n) ? Number(params.n) : -1;
 		const to = query.to ?? (await findRevision(db, site.id));
 		const diff = await compareRevisions(db, site.id, from, to);
-		if (!diff) throw new Problem(404, 'revision-not-found', `This site's map has no revision ${from < 0 ? params.n : `${from} or no revision ${to}`}.`);
+		if (!diff)
+			throw new Problem(
+				404,
+				'revision-not-found',
+				`This site's map has no revision ${from < 0 ? params.n : `${from} or no revision ${to}`}.`,
+			);
 		return diffAnswer(diff, from, to);
 	},
 );

@@ -16,6 +16,8 @@ export const POST = api(
 	async ({ pool, site, params, body, actor, ip }) => {
 		const revision = /^\d{1,9}$/.test(params.n) ? Number(params.n) : 0;
 		const note = body.note ?? `restores revision ${params.n}`;
-		return publishOrProblem(await restoreRevision(pool, { siteId: site.id, revision, note, convert: body.convert ?? false, actor, ip }));
+		return publishOrProblem(
+			await restoreRevision(pool, { siteId: site.id, revision, note, convert: body.convert ?? false, actor, ip }),
+		);
 	},
 );
