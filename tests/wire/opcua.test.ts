@@ -2,8 +2,10 @@ import { mkdtempSync, mkdirSync, rmSync, writeFileSync } from 'node:fs';
 import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { afterAll, afterEach, beforeAll, describe, expect, it } from 'vitest';
+import { DataType, DataValue, StatusCode, StatusCodes } from 'node-opcua';
 import { opcuaSettings, type OpcuaSettings } from '#lib/domain/source-settings.ts';
 import { createOpcuaSource } from '#lib/pipeline/sources/opcua/opcua-source.ts';
+import { toSample } from '#lib/pipeline/sources/opcua/variant-input.ts';
 import type { Sample, SourceContext, SourceLink, WantedAddress } from '#lib/pipeline/sources/source.ts';
 import { startOpcuaSimulator, type OpcuaSimulator } from '../../simulators/opcua/opcua-simulator.ts';
 import { freePort } from '../support/cluster.ts';
@@ -140,6 +142,18 @@ describe('reading by subscription', () => {
 		server.set('V4', 78);
 		await until(() => samples.slice(before).some((sample) => valueOf(sample) === 78));
 		expect(samples.slice(before).some((sample) => valueOf(sample) === 77)).toBe(false);
+	});
+});
+
+describe('a value that was dropped before this one', () => {
+	it.each([
+		['Overflow | InfoTypeDataValue', 0x00000480],
+		['Overflow', 0x00000080],
+	] as const)('is noted by %s, and the status is passed on without it [OPC 10000-4 §7.39]', (bits, code) => {
+		const statusCode = StatusCode.makeStatusCode(StatusCodes.Good, bits);
+		expect(statusCode.value).toBe(code);
+		const dataValue = new DataValue({ value: { dataType: DataType.Double, value: 1 }, statusCode });
+		expect(toSample(1, dataValue, 0)).toMatchObject({ gapBefore: true, sourceQuality: 0 });
 	});
 });
 

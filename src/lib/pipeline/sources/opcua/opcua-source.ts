@@ -4,6 +4,7 @@ import {
 	type ClientMonitoredItemGroup,
 	type ClientSession,
 	type ClientSubscription,
+	NumericRange,
 	TimestampsToReturn,
 } from 'node-opcua';
 import type { OpcuaSettings } from '#lib/domain/source-settings.ts';
@@ -50,7 +51,7 @@ interface Item {
 	fault: Fault | null;
 }
 
-/** One subscription for each distinct publishing interval. */
+/** A subscription at one publishing rate. */
 interface Lane {
 	intervalMs: number;
 	subscription: ClientSubscription;
@@ -296,15 +297,17 @@ class OpcuaLink implements SourceLink {
 				});
 				continue;
 			}
-			const publishMs = Math.min(this.#settings.publishing_interval_ms, item.wanted.intervalMs);
-			const list = byInterval.get(publishMs) ?? [];
+			const list = byInterval.get(item.wanted.intervalMs) ?? [];
 			list.push({ item, nodeId: resolved.nodeId, indexRange: address.indexRange });
-			byInterval.set(publishMs, list);
+			byInterval.set(item.wanted.intervalMs, list);
 		}
-		for (const [intervalMs, list] of byInterval) {
-			const lane = await this.#laneOf(intervalMs);
-			for (let start = 0; start < list.length; start += ITEMS_PER_CALL)
-				await this.#createBatch(lane, list.slice(start, start + ITEMS_PER_CALL));
+		// One subscription for the one publishing rate, however many sampling rates: servers allow few publish requests.
+		if (byInterval.size === 0) return;
+		const lane = await this.#laneOf(this.#settings.publishing_interval_ms);
+		for (const [samplingMs, list] of byInterval) {
+			for (let start = 0; start < list.length; start += ITEMS_PER_CALL) {
+				await this.#createBatch(lane, samplingMs, list.slice(start, start + ITEMS_PER_CALL));
+			}
 		}
 	}
 
@@ -346,21 +349,39 @@ class OpcuaLink implements SourceLink {
 		return lane;
 	}
 
-	async #createBatch(lane: Lane, list: readonly { item: Item; nodeId: string; indexRange: string | null }[]): Promise<void> {
-		const sampling = Math.min(...list.map(({ item }) => item.wanted.intervalMs), lane.intervalMs);
-		const group: ClientMonitoredItemGroup = await within(
-			lane.subscription.monitorItems(
-				list.map(({ nodeId, indexRange }) => ({
-					nodeId,
-					attributeId: AttributeIds.Value,
-					...(indexRange ? { indexRange: indexRange as unknown as undefined } : {}),
-				})),
-				{ samplingInterval: sampling, discardOldest: true, queueSize: Math.max(10, Math.ceil(lane.intervalMs / sampling) + 1) },
-				TimestampsToReturn.Both,
-			),
-			20_000,
-			'creating items',
-		);
+	async #createBatch(
+		lane: Lane,
+		samplingMs: number,
+		list: readonly { item: Item; nodeId: string; indexRange: string | null }[],
+	): Promise<void> {
+		let group: ClientMonitoredItemGroup;
+		try {
+			group = await within(
+				lane.subscription.monitorItems(
+					list.map(({ nodeId, indexRange }) => ({
+						nodeId,
+						attributeId: AttributeIds.Value,
+						...(indexRange ? { indexRange: new NumericRange(indexRange) } : {}),
+					})),
+					{
+						samplingInterval: samplingMs,
+						discardOldest: true,
+						// Room for every sample between two publishings, and one more.
+						queueSize: Math.max(2, Math.ceil(lane.intervalMs / samplingMs) + 1),
+					},
+					TimestampsToReturn.Both,
+				),
+				20_000,
+				'creating items',
+			);
+		} catch (error) {
+			if (list.length === 1 || !/TooMany|TooLarge|EncodingLimits/.test((error as Error).message)) throw error;
+			// A server that takes fewer at once is asked for half as many.
+			const middle = list.length >> 1;
+			await this.#createBatch(lane, samplingMs, list.slice(0, middle));
+			await this.#createBatch(lane, samplingMs, list.slice(middle));
+			return;
+		}
 		group.on('changed', (_, dataValue, index) => {
 			const item = list[index]?.item;
 			if (!item || this.#items.get(item.key) !== item) return;
@@ -385,7 +406,8 @@ class OpcuaLink implements SourceLink {
 				item.fault = null;
 				lane.items.add(item);
 			} else {
-				this.#refuse(item, { code: 'node-missing', detail: status?.name ?? 'not created' });
+				const name = status?.name ?? 'not created';
+				this.#refuse(item, { code: /NodeId|AttributeId/.test(name) ? 'node-missing' : 'source-bad', detail: name });
 			}
 		});
 	}
@@ -402,9 +424,9 @@ class OpcuaLink implements SourceLink {
 	}
 
 	#retryMissing(): void {
-		const missing = [...this.#items.values()].filter((item) => item.fault);
-		if (missing.length === 0 || this.#isEnded) return;
-		this.#changing = this.#changing.then(() => this.#create(missing)).catch((error: Error) => this.#lost(error.message));
+		this.#changing = this.#changing
+			.then(() => this.#create([...this.#items.values()].filter((item) => item.fault && !this.#isEnded)))
+			.catch((error: Error) => this.#lost(error.message));
 	}
 
 	/** Samples of one notification go on together. */
@@ -488,8 +510,11 @@ class OpcuaLink implements SourceLink {
 		this.#isEnded = true;
 		for (const timer of this.#timers) clearInterval(timer);
 		await this.#open.close().catch(() => undefined);
-		this.#flush();
-		await Promise.allSettled(this.#underway);
+		// Everything taken is handed over before the link counts as closed.
+		while (this.#outgoing.length > 0 || this.#underway.size > 0) {
+			this.#flush();
+			await Promise.allSettled(this.#underway);
+		}
 		this.#settle.resolve();
 	}
 }

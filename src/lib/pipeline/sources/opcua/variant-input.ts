@@ -2,8 +2,9 @@
 import { type DataValue, DataType, VariantArrayType } from 'node-opcua';
 import type { Sample } from '../source.ts';
 
-/** Overflow of a queue: info type DataValue with the overflow bit [OPC 10000-4 §7.39]. */
-const OVERFLOW = 0x480;
+/** Overflow of a queue: the overflow bit, with info type DataValue [OPC 10000-4 §7.39]; some servers leave the info type out. */
+const OVERFLOW = 0x080;
+const OVERFLOW_AND_INFO = 0x480;
 
 /** A 64-bit integer comes as [high, low]. */
 function toBigint(pair: unknown, isSigned: boolean): bigint {
@@ -30,7 +31,7 @@ export function toSample(key: number, dataValue: DataValue, receivedAt: number):
 					: Array.from(value as ArrayLike<unknown>, (pair) => toBigint(pair, isSigned));
 		raw = { kind: 'variant', dataType: DataType[variant.dataType] ?? 'Unknown', value };
 	}
-	const sourceQuality = isOverflow ? (code & ~OVERFLOW) >>> 0 : code;
+	const sourceQuality = isOverflow ? (code & ~OVERFLOW_AND_INFO) >>> 0 : code;
 	return {
 		key,
 		receivedAt,
