@@ -64,7 +64,8 @@ export class TestValues {
 		this.#pipeline.add((pending, clock) => {
 			for (const alarm of left.rows) {
 				const tag = this.#pipeline.tags.get(alarm.tag_id);
-				if (tag) pending.alarmChanges.push(endOfTest(tag.plan, alarm.direction, alarm.level, alarm.raised_at.getTime(), clock.now));
+				if (tag)
+					pending.alarmChanges.push(endOfTest(tag.plan, alarm.direction, alarm.level, alarm.raised_at.getTime(), clock.now));
 			}
 		});
 	}
