@@ -42,8 +42,10 @@ export const GET = api(
 		const place = await resolvePlace(pool, site.id, query.after);
 		if (!place.ok) throw new Problem(410, 'cursor-gone', `${place.detail ?? 'This place is no longer kept'}.`);
 		const tagIds = await resolveTags(pool, site.id, query.tags);
-		const note = (position: number) =>
-			noteReader(pool, { id: `${actor.kind} ${actor.id}`, name: actor.name, siteId: site.id, position });
+		// Receivers read by key; a person looking is none.
+		const note = (position: number) => {
+			if (actor.kind === 'key') noteReader(pool, { id: actor.id, name: actor.name, siteId: site.id, position });
+		};
 
 		if (answerType !== JSON_TYPE && query.limit === undefined) {
 			const head = await readFeedHead(pool, site.id);

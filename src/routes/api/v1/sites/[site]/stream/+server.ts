@@ -25,8 +25,10 @@ export const GET = api(
 					from: place.value,
 					tagIds,
 					signal: AbortSignal.any([request.signal, shutdownSignal]),
-					onDelivered: (position) =>
-						noteReader(pool, { id: `${actor.kind} ${actor.id}`, name: actor.name, siteId: site.id, position }),
+					// Receivers read by key; a person's open page is none.
+					onDelivered: (position) => {
+						if (actor.kind === 'key') noteReader(pool, { id: actor.id, name: actor.name, siteId: site.id, position });
+					},
 				})
 			: goneStream(place.detail ?? 'this place is no longer kept');
 		return new Response(body, {
