@@ -65,20 +65,22 @@ async function main(): Promise<void> {
 		['millrace_map', 'millrace_sources', 'millrace_limits', 'millrace_requests'],
 		() => void supervisor.look(),
 	);
-	await supervisor.start();
-	log.info({ instance: owner.instance }, 'the collector runs');
-
+	// Signals are heeded before leases are taken, so that a stop in the middle of the start gives them back too.
+	const started = supervisor.start();
 	let isStopping = false;
 	const stop = async () => {
 		if (isStopping) process.exit(1);
 		isStopping = true;
 		stopListening();
+		await started.catch(() => undefined);
 		await supervisor.stop();
 		await writer.close();
 		await pool.end();
 		process.exit(0);
 	};
 	for (const signal of ['SIGTERM', 'SIGINT'] as const) process.on(signal, () => void stop());
+	await started;
+	log.info({ instance: owner.instance }, 'the collector runs');
 }
 
 process.on('unhandledRejection', (error) => log.error({ err: error }, 'a promise was left alone'));
