@@ -1,9 +1,12 @@
 // Edge: collector. Tests, looks and reads that the pages ask of a running source, over its own connection. May touch: the requests table.
 import type { Pool } from '#lib/server/db/pool.ts';
-import type { WantedAddress } from '#lib/pipeline/sources/source.ts';
+import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
+import { toDryReading } from '#lib/pipeline/normalize/dry-reading.ts';
 import type { SourceRun } from './source-run.ts';
 
 const LIMIT_MS = 9_000;
+/** A dry run waits this long for its values. */
+const READ_MS = 4_000;
 const underway = new Set<string>();
 
 /** Answers what is asked of sources that run here; each answer is told by NOTIFY. Long ones do not hold up the next look. */
@@ -56,8 +59,12 @@ async function answer(run: SourceRun, request: { kind: string; params: Record<st
 			return { items: await run.link.browse((request.params.node as string | null) ?? null, signal) };
 		case 'read': {
 			if (!run.link) return { error: run.advice?.text ?? 'not connected' };
-			const samples = await run.readOnce(request.params.addresses as WantedAddress[], 4_000);
-			return { samples: [...samples.values()] };
+			const plans = request.params.plans as TagPlan[];
+			const samples = await run.readOnce(
+				plans.map((plan) => ({ key: plan.tagId, address: plan.address, intervalMs: plan.intervalMs })),
+				READ_MS,
+			);
+			return { items: plans.map((plan) => toDryReading(plan, samples.get(plan.tagId), Date.now())) };
 		}
 		case 'reconnect':
 			run.reconnect();

@@ -1,6 +1,7 @@
 // Edge: store. May touch: feed tables, in the caller's transaction.
 import type { Client } from '#lib/server/db/pool.ts';
 import { packReadings, type JournalReading } from './journal-codec.ts';
+import { ensureJournalDay } from './partitions.ts';
 import type { FeedEvent } from './write-batch.ts';
 
 export interface JournalEntry {
@@ -56,6 +57,8 @@ export async function appendJournal(
 /** Appends events of another change (a tag renamed, a source lost) within that change's transaction; call it last. */
 export async function appendFeedEvents(client: Client, siteId: number, events: readonly FeedEvent[], now: number): Promise<void> {
 	if (events.length === 0) return;
+	// A change may come before any collector has run; the journal's day must not be missing for it.
+	await ensureJournalDay(client, now);
 	const positions = await appendJournal(client, new Map([[siteId, { readings: [], events: [...events] }]]), now);
 	// Delivered at commit; one a change of configuration, never one a reading.
 	for (const [site, position] of positions) await client.query("SELECT pg_notify('millrace_feed', $1)", [`${site}:${position}`]);

@@ -64,6 +64,7 @@ export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
 	'/api/v1/sites/[site]/map': 'api',
 	'/api/v1/sites/[site]/map/draft': 'api',
 	'/api/v1/sites/[site]/map/draft/check': 'api',
+	'/api/v1/sites/[site]/map/draft/dry-run': 'api',
 	'/api/v1/sites/[site]/map/draft/publish': 'api',
 	'/api/v1/sites/[site]/map/revisions': 'api',
 	'/api/v1/sites/[site]/map/revisions/[n]/diff': 'api',
