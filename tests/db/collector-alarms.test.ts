@@ -26,11 +26,11 @@ beforeAll(async () => {
 	await site.publish(
 		'press line',
 		{ tag: 'delayed' },
-		{ tag: 'quiet', stale_after_s: 1.2 },
+		{ tag: 'quiet', stale_after_s: 0.8 },
 		{ tag: 'tested' },
 		{ tag: 'unchanged' },
 	);
-	ids = await site.publish('far tank', { tag: 'first', stale_after_s: 1.2 }, { tag: 'second', stale_after_s: 2.4 });
+	ids = await site.publish('far tank', { tag: 'first', stale_after_s: 1.2 }, { tag: 'second', stale_after_s: 1.8 });
 	await site.limit(
 		{ tag: 'delayed', kind: 'high', level: 'alert', value: 7, deadband: 0.5, raise_after_s: 30 },
 		{ tag: 'quiet', kind: 'stale', level: 'alert' },
@@ -122,18 +122,24 @@ describe('a source that is lost', () => {
 });
 
 describe('a tag that falls silent while its source is fine', () => {
-	it('raises its stale alarm, ends its silence with a confirmation, and raises no connection alarm', async () => {
+	it('raises its stale alarm, also before its first value, and ends it with the next value or a confirmation', async () => {
 		const cursor = await site.cursor();
 		const keep = setInterval(() => void device.send(sampleOf(id('tested'), 1)), 200);
 		try {
+			await until('the stale alarm of a tag that never spoke', async () => (await site.alarms(id('quiet'))).length === 1);
 			await device.send(sampleOf(id('quiet'), 3));
-			await until('the stale alarm', async () => (await site.alarms(id('quiet'))).length === 1);
-			expect(await site.alarms(id('quiet'))).toMatchObject([{ direction: 'stale', cleared_at: null }]);
+			expect((await site.alarms(id('quiet')))[0]?.cleared_at).not.toBeNull();
+			await until('the stale alarm', async () => (await site.alarms(id('quiet'))).length === 2);
+			expect((await site.alarms(id('quiet')))[1]).toMatchObject({ direction: 'stale', cleared_at: null });
 			expect(await site.fed(cursor, id('quiet'))).toEqual([3, null]);
-			expect((await until('latest', () => site.latest('quiet'))).value).toBe(3);
+			const latest = await until('latest', async () => {
+				const row = await site.latest('quiet');
+				return row?.isStale && row.value !== null && row;
+			});
+			expect(latest).toMatchObject({ value: 3, quality: LAST_USABLE });
 			// The source says that the last value still stands.
 			await device.send(sampleOf(id('quiet'), 0, null, { raw: null, confirms: true }));
-			await until('it clears', async () => (await site.alarms(id('quiet')))[0]?.cleared_at);
+			await until('it clears', async () => (await site.alarms(id('quiet')))[1]?.cleared_at);
 			expect(await site.fed(cursor, id('quiet'))).toEqual([3, null, 3]);
 			const connection = await site.pool.query("SELECT 1 FROM alarms WHERE direction = 'connection' AND source_id <> $1", [
 				lost.id,

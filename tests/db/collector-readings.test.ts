@@ -7,6 +7,7 @@ let database: Awaited<ReturnType<typeof cloneDatabase>>;
 let site: CollectingSite;
 let device: ScriptedDevice;
 let sourceId: string;
+let second: { id: string; device: ScriptedDevice };
 let collector: Collector;
 let ids: Record<string, number>;
 const id = (tag: string) => ids[tag] ?? 0;
@@ -15,6 +16,7 @@ beforeAll(async () => {
 	database = await cloneDatabase();
 	site = await CollectingSite.lay(database.url);
 	({ id: sourceId, device } = await site.addSource('press line'));
+	second = await site.addSource('compressor house');
 	ids = await site.publish(
 		'press line',
 		{ tag: 'plain' },
@@ -26,7 +28,7 @@ beforeAll(async () => {
 		{ tag: 'polled', expected_every_s: 2 },
 	);
 	collector = await site.start();
-	await until('the source runs', () => device.isConnected && device.asked.length > 0);
+	await until('the sources run', () => device.asked.length > 0 && second.device.asked.length > 0);
 });
 afterAll(async () => {
 	await site.end();
@@ -159,14 +161,12 @@ describe('a published revision', () => {
 	});
 
 	it('that moves a tag to another source lets the other source feed it, with its history', async () => {
-		const other = await site.addSource('a source that sorts first or last');
-		await until('both sources run', () => other.device.isConnected);
 		ids = await site.publish('press line', { tag: 'moving' });
 		await until('it is asked for', () => device.asked.at(-1)?.some((one) => one.key === id('moving')));
 		await device.send(sampleOf(id('moving'), 1));
 		for (const [name, target, from] of [
-			['a source that sorts first or last', other.device, device],
-			['press line', device, other.device],
+			['compressor house', second.device, device],
+			['press line', device, second.device],
 		] as const) {
 			await site.publishRows({ tag: 'moving', source: name });
 			await until('the other source asks for it', () => target.asked.at(-1)?.some((one) => one.key === id('moving')));
@@ -179,8 +179,7 @@ describe('a published revision', () => {
 
 describe('a changed source setting', () => {
 	it('restarts that source and no other', async () => {
-		const { id: changed, device: other } = await site.addSource('compressor house');
-		await until('the second source runs', () => other.isConnected);
+		const { id: changed, device: other } = second;
 		const opens = device.opens;
 		await site.pool.query('UPDATE sources SET version = version + 1 WHERE id = $1', [changed]);
 		await until('it is opened again', () => other.opens === 2 && other.isConnected, 3_000);

@@ -2,7 +2,7 @@
 import { severityOf, STATUS_CODES } from '#lib/domain/quality.ts';
 import type { RawScalar, Reading, Verdict } from '#lib/domain/reading.ts';
 import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
-import { confirm, goStale, judge, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
+import { confirm, freshState, goStale, judge, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
 import { judgeLate } from '#lib/pipeline/evaluate/judge-late.ts';
 import { shouldStore, type LastStored } from '#lib/pipeline/normalize/deadband.ts';
 import { normalize, type NormalizeContext } from '#lib/pipeline/normalize/normalize.ts';
@@ -238,8 +238,9 @@ export class TagRuntime {
 		};
 		sink.readings.push(reading);
 		this.#lastStored = { at: clock.now, value: null, quality: reading.quality };
-		if (this.judging && plan.limits.length > 0) {
-			const { state, changes } = goStale(this.judging, plan, clock.now);
+		// A tag that never brought a value is missed as well.
+		if (plan.limits.length > 0) {
+			const { state, changes } = goStale(this.judging ?? freshState(), plan, clock.now);
 			this.judging = state;
 			this.#heldBack = changes.map((change) => ({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false }));
 			if (!suppress) this.raiseStale(sink);
