@@ -224,6 +224,8 @@ export class SourceRun {
 				? []
 				: tags.filter((tag) => tag.isSuppressed && mono - this.#linkedMono > tag.plan.staleAfterS * 1_000);
 		if (left.length > 0) pipeline.add((pending) => left.forEach((tag) => tag.raiseStale(pending)));
+		const silent = tags.filter((tag) => tag.isStale);
+		if (silent.length > 0) pipeline.add((pending, clock) => silent.forEach((tag) => tag.stayStale(clock, pending)));
 		const stale = staleBefore + overdue.length;
 		const before = this.state;
 		if (isLost) this.state = 'lost';

@@ -4,7 +4,13 @@ import { log } from '#lib/server/log.ts';
 import type { EmitAnswer, Sample } from '#lib/pipeline/sources/source.ts';
 import type { CopyWriter } from '#lib/pipeline/store/copy-writer.ts';
 import { rawEdgeOf } from '#lib/pipeline/store/partitions.ts';
-import type { FeedEvent, TagAlarmChange, StoredReading, WriteBatch } from '#lib/pipeline/store/write-batch.ts';
+import {
+	EMPTY_BATCH,
+	type FeedEvent,
+	type StoredReading,
+	type TagAlarmChange,
+	type WriteBatch,
+} from '#lib/pipeline/store/write-batch.ts';
 import { TagRuntime, type Sink, type StageClock, type TagMemory } from './tag-runtime.ts';
 
 /** A commit at least this often, and at least every so many readings. */
@@ -47,6 +53,12 @@ function hasWork(pending: Pending): boolean {
 			pending.resolvers.length >
 		0
 	);
+}
+
+/** True for what the database refuses by its rules (data, constraints, names, raised by us); false where it is away or busy, and trying again helps. */
+function isRefusal(error: unknown): boolean {
+	const code = error instanceof Error && 'code' in error ? String(error.code) : '';
+	return /^(22|23|42|P0)/.test(code);
 }
 
 /** The middle of a reading's journey, for all sources of this process. */
@@ -223,6 +235,12 @@ export class Pipeline {
 				for (const resolve of resolvers) resolve('stored');
 				return;
 			} catch (error) {
+				if (isRefusal(error)) {
+					// The database is there and will refuse this batch again: what of it can be written is.
+					await this.#writeParts(batch, error as Error);
+					for (const resolve of resolvers) resolve('stored');
+					return;
+				}
 				if (!this.#isDown) log.error({ error: (error as Error).message }, 'readings cannot be written; they wait in memory');
 				this.#isDown = true;
 				if (this.#isClosing) {
@@ -232,6 +250,32 @@ export class Pipeline {
 					return;
 				}
 				await new Promise((resolve) => setTimeout(resolve, RETRY_MS));
+			}
+		}
+	}
+
+	/** Writes a refused batch part by part, so that one part that breaks a rule holds up nothing; what is refused still is counted and logged. */
+	async #writeParts(batch: WriteBatch, refusal: Error): Promise<void> {
+		log.error({ error: refusal.message }, 'a batch was refused and is written in parts');
+		const parts: Partial<WriteBatch>[] = [
+			{ readings: batch.readings },
+			{ latest: batch.latest },
+			{ confirmations: batch.confirmations },
+			{ judgingStates: batch.judgingStates },
+			{ testReadings: batch.testReadings },
+			{ events: batch.events },
+			...batch.alarmChanges.map((change) => ({ alarmChanges: [change] })),
+		];
+		for (const part of parts) {
+			try {
+				const result = await this.#writer.write({ ...EMPTY_BATCH, ...part });
+				this.counts.stored += result.stored;
+				this.counts.duplicates += result.duplicates;
+				this.counts.deadLetters += result.deadLetters;
+			} catch (error) {
+				this.counts.deadLetters += part.readings?.length ?? 1;
+				this.counts.dropped += part.readings?.length ?? 0;
+				log.error({ error: (error as Error).message, part: Object.keys(part)[0] }, 'part of a batch was refused and is given up');
 			}
 		}
 	}

@@ -216,6 +216,20 @@ export class TagRuntime {
 		return !this.isStale && mono - this.aliveMono > this.plan.staleAfterS * 1_000;
 	}
 
+	/** The silence goes on: stale limits with seconds of their own may be due by now. */
+	stayStale(clock: StageClock, sink: Sink): void {
+		if (this.plan.limits.some((limit) => limit.kind === 'stale' && limit.value != null)) this.#judgeSilence(clock, sink);
+	}
+
+	#judgeSilence(clock: StageClock, sink: Sink): void {
+		const { plan } = this;
+		const { state, changes } = goStale(this.judging ?? freshState(), plan, clock.now, (clock.mono - this.aliveMono) / 1_000);
+		if (changes.length > 0 || !this.judging?.isStale) sink.touchJudging(this);
+		this.judging = state;
+		this.#heldBack.push(...changes.map((change) => ({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false })));
+		if (!this.isSuppressed) this.raiseStale(sink);
+	}
+
 	/** Says once that the tag went stale: a reading without value for the feed, the last value kept as uncertain. `suppress` keeps its stale alarm back. */
 	goStale(clock: StageClock, sink: Sink, suppress: boolean): void {
 		const { plan } = this;
@@ -240,11 +254,8 @@ export class TagRuntime {
 		this.#lastStored = { at: clock.now, value: null, quality: reading.quality };
 		// A tag that never brought a value is missed as well.
 		if (plan.limits.length > 0) {
-			const { state, changes } = goStale(this.judging ?? freshState(), plan, clock.now);
-			this.judging = state;
-			this.#heldBack = changes.map((change) => ({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false }));
-			if (!suppress) this.raiseStale(sink);
-			sink.touchJudging(this);
+			this.#heldBack = [];
+			this.#judgeSilence(clock, sink);
 		}
 		if (this.latest) {
 			this.latest = {

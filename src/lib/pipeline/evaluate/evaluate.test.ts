@@ -221,6 +221,21 @@ describe('other kinds', () => {
 	});
 });
 
+describe('stale limits with seconds of their own', () => {
+	it('raise and escalate as the silence goes on', () => {
+		const limits = [limit({ kind: 'stale', value: 60 }), limit({ kind: 'stale', value: 120, level: 'danger', limitId: 2 })];
+		const plan = { limits, staleAfterS: 30 };
+		const { state } = run(limits, [[0, 2]]);
+		const first = goStale(state, plan, T0 + 31_000, 31);
+		expect(first.changes).toEqual([]);
+		const second = goStale(first.state, plan, T0 + 61_000, 61);
+		expect(second.changes).toMatchObject([{ kind: 'raised', direction: 'stale', level: 'alert', at: T0 + 61_000 }]);
+		const third = goStale(second.state, plan, T0 + 121_000, 121);
+		expect(third.changes).toMatchObject([{ kind: 'escalated', level: 'danger', raisedAt: T0 + 61_000 }]);
+		expect(goStale(third.state, plan, T0 + 500_000, 500).changes).toEqual([]);
+	});
+});
+
 describe('order and clocks', () => {
 	it('a reading not after the last judged one is late and never judged live', () => {
 		const { state } = run([limit()], [[10, 2]]);

@@ -123,18 +123,30 @@ export function confirm(
 	return { state, changes, verdict: levelNow(state) };
 }
 
-/** No reading or confirmation came for the stale time: pending delays start anew afterwards, and stale limits raise. */
-export function goStale(before: JudgingState, plan: JudgedPlan, at: number): { state: JudgingState; changes: AlarmChange[] } {
+/**
+ * Nothing came for `silentS` seconds, at least the stale time: pending delays start anew afterwards, and stale limits raise whose own
+ * seconds, if they give any, have passed. Asked again as the silence goes on, it raises or escalates by those that are due then.
+ */
+export function goStale(
+	before: JudgingState,
+	plan: JudgedPlan,
+	at: number,
+	silentS = Number.POSITIVE_INFINITY,
+): { state: JudgingState; changes: AlarmChange[] } {
 	const changes: AlarmChange[] = [];
 	const runs: Record<string, LimitRun> = {};
 	for (const [id, run] of Object.entries(before.runs))
 		runs[id] = run.isRaised ? { ...run, goneSince: null } : { ...run, holdsSince: null };
-	const stale = plan.limits.filter((limit) => limit.kind === 'stale');
+	const due = plan.limits.filter((limit) => limit.kind === 'stale' && (limit.value ?? 0) <= silentS);
 	const state: JudgingState = { ...before, runs, isStale: true, open: { ...before.open } };
-	const worst = stale.find((limit) => limit.level === 'danger') ?? stale[0];
-	if (worst && !state.open.stale) {
+	const worst = due.find((limit) => limit.level === 'danger') ?? due[0];
+	const open = state.open.stale;
+	if (worst && !open) {
 		state.open.stale = { raisedAt: at, level: worst.level, levelNow: worst.level };
 		changes.push(change('raised', 'stale', worst, state.open.stale, at, null, false));
+	} else if (worst && open && worst.level === 'danger' && open.levelNow !== 'danger') {
+		state.open.stale = { raisedAt: open.raisedAt, level: 'danger', levelNow: 'danger' };
+		changes.push(change('escalated', 'stale', worst, state.open.stale, at, null, false));
 	}
 	return { state, changes };
 }

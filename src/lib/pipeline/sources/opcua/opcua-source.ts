@@ -64,7 +64,21 @@ interface Lane {
 export function createOpcuaSource(settings: OpcuaSettings, context: SourceContext): Source {
 	return {
 		async open(emit, signal) {
-			const open = await openSession(settings, context);
+			const opening = openSession(settings, context);
+			// A stop does not wait for a server that is slow to answer; what opens after it is closed again.
+			const aborted = new Promise<never>((_, reject) => {
+				const stop = () => reject(new SourceError(adviceOf('closed', settings.endpoint_url)));
+				if (signal.aborted) stop();
+				else signal.addEventListener('abort', stop, { once: true });
+			});
+			aborted.catch(() => undefined);
+			let open: OpenSession;
+			try {
+				open = await Promise.race([opening, aborted]);
+			} catch (error) {
+				opening.then((late) => late.close()).catch(() => undefined);
+				throw error;
+			}
 			return new OpcuaLink(settings, context, open, emit, signal);
 		},
 		test: () => testServer(settings, context),
@@ -211,7 +225,13 @@ class OpcuaLink implements SourceLink {
 
 	async test(): Promise<TestReport> {
 		const begun = performance.now();
-		const skew = await readSkew(this.#open, this.#context);
+		let skew: number | null;
+		try {
+			skew = await within(readSkew(this.#open, this.#context), 5_000, this.#settings.endpoint_url);
+		} catch (error) {
+			const advice = adviceOf((error as Error).message, this.#settings.endpoint_url);
+			return { ok: false, steps: [{ name: 'Session', ok: false, detail: advice.text }], advice };
+		}
 		const missing = [...this.#items.values()].filter((item) => item.fault);
 		const steps: TestStep[] = [
 			{
@@ -387,7 +407,7 @@ class OpcuaLink implements SourceLink {
 			if (!item || this.#items.get(item.key) !== item) return;
 			const sample = toSample(item.key, dataValue, this.#context.now());
 			item.hasValue = true;
-			item.isGood = (sample.sourceQuality ?? 0) >>> 30 !== 2;
+			item.isGood = (sample.sourceQuality ?? 0) >>> 30 === 0;
 			if (sample.gapBefore)
 				this.#context.observer.event(
 					'warning',
