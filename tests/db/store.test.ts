@@ -188,10 +188,10 @@ describe('the cursor never skips', () => {
 		expect((await readAll(siteId, start)).values).toEqual([2]);
 	});
 
-	it('with four writers against one reader', async () => {
+	it('with four writers against one reader for a minute', async () => {
 		const { siteId, tagIds } = await siteWithTags(pool, 4);
 		let cursor = await currentCursor(pool, siteId);
-		const until = performance.now() + 8_000;
+		const until = performance.now() + 60_000;
 		let sent = 0;
 		const write = async (lane: number) => {
 			const own = createCopyWriter(pool, { now: Date.now });
@@ -223,7 +223,7 @@ describe('the cursor never skips', () => {
 		expect(seen.size).toBe(sent);
 		expect([...seen.values()].every((count) => count === 1)).toBe(true);
 		expect(sent).toBeGreaterThan(1_000);
-	}, 60_000);
+	}, 120_000);
 
 	it('moves on past what a filter hides', async () => {
 		const { siteId, tagIds } = await siteWithTags(pool, 2);

@@ -166,17 +166,60 @@ describe('reading', () => {
 
 describe('a device that misbehaves', () => {
 	it('a late answer is never taken for another request’s value', async () => {
+		// The library counts transaction ids modulo 256: an answer held back from request 2 bears the id of request 258.
 		const made = await device();
-		made.behaviour.hold = { request: 2, until: 5 };
-		const { samples } = await open(made.port, [
-			{ key: 1, address: at(0), intervalMs: 40 },
-			{ key: 2, address: at(200), intervalMs: 40 },
-		]);
-		await until(() => made.requests > 300 && samples.length > 300, 20_000);
-		const wrong = samples.filter((sample) => !sample.fault && valueOf(sample) !== (sample.key === 1 ? 1_000 : 1_200));
+		made.behaviour.hold = { request: 2, until: 258 };
+		const { samples } = await open(
+			made.port,
+			[0, 100, 200].map((register, i) => ({ key: i + 1, address: at(register, { unitId: i + 1 }), intervalMs: 20 })),
+		);
+		await until(() => made.requests > 300, 20_000);
+		const wrong = samples.filter((sample) => !sample.fault && valueOf(sample) !== sample.key * 1_000 + (sample.key - 1) * 100);
 		expect(wrong).toEqual([]);
 		expect(samples.some((sample) => sample.fault?.code === 'no-answer')).toBe(true);
 	}, 30_000);
+
+	it('a refused register that nobody wants is read over no more', async () => {
+		const made = await device();
+		made.behaviour.exceptions = [{ unitId: 1, from: 5, to: 6, code: 2 }];
+		const { samples } = await open(made.port, wanted([at(3), at(7)]));
+		await until(() => samples.length >= 20);
+		expect(samples.every((sample) => sample.fault === null)).toBe(true);
+		expect(made.log.filter((one) => one.start <= 5 && 5 < one.start + one.count)).toHaveLength(1);
+	});
+
+	it('a gateway that says a unit does not answer is asked rarely for that unit, the others go on', async () => {
+		const made = await device();
+		made.behaviour.exceptions = [{ unitId: 2, from: 0, to: 300, code: 11 }];
+		const { samples, link } = await open(
+			made.port,
+			[1, 2].map((unitId) => ({ key: unitId, address: at(5, { unitId }), intervalMs: 20 })),
+		);
+		await until(() => samples.filter((sample) => sample.key === 1).length >= 40);
+		expect(made.log.filter((one) => one.unitId === 2).length).toBeLessThanOrEqual(3);
+		expect(samples.find((sample) => sample.key === 2)?.fault).toMatchObject({ code: 'exception', exception: 11 });
+		expect(link.advice).toMatchObject({ code: 'unit-silent' });
+	});
+
+	it('a device that answers in 700 ms is well with the default time-out, over one socket', async () => {
+		const made = await device({ mostClients: 1 });
+		made.behaviour.delayMs = 700;
+		const { samples } = await open(made.port, wanted([at(0)], 500), { timeout_ms: 2_000 });
+		await until(() => samples.length >= 3);
+		expect(samples.every((sample) => sample.fault === null)).toBe(true);
+	});
+
+	it('a device that wants a pause between requests gets it', async () => {
+		const made = await device();
+		made.behaviour.gapMs = 40;
+		const { samples } = await open(
+			made.port,
+			[1, 2, 3].map((unitId) => ({ key: unitId, address: at(0, { unitId }), intervalMs: 200 })),
+			{ gap_ms: 50 },
+		);
+		await until(() => samples.length >= 9);
+		expect(samples.every((sample) => sample.fault === null)).toBe(true);
+	});
 
 	it('an answer that comes byte by byte is whole: no zeros in the upper registers', async () => {
 		const made = await device();

@@ -64,6 +64,8 @@ export class ModbusLink {
 		}
 		client.setTimeout(timeoutMs);
 		this.#client = client;
+		// A device that wants a pause wants it after the connection too.
+		this.#lastEnd = performance.now();
 	}
 
 	/** One request. Id and request go out in the same tick, since the id is the connection's and not the request's. */

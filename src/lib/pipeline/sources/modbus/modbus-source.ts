@@ -20,7 +20,12 @@ const RECONNECTS = 3;
 interface KnownHole extends Hole {
 	probeAt: number;
 	code: number;
+	/** Between wanted registers, wanted by nobody: never asked again. */
+	isGap: boolean;
 }
+
+/** A unit that is busy is left alone this long. */
+const PATIENCE_MS = 1_000;
 
 /** Reads a Modbus device or gateway on a schedule: planned block reads, one request in flight, holes remembered, silent units asked rarely. */
 export function createModbusSource(settings: ModbusSettings, context: SourceContext): Source {
@@ -117,6 +122,8 @@ class Poller implements SourceLink {
 		this.#items = wanted.flatMap(({ key, address, intervalMs }) =>
 			address.kind === 'modbus' ? [{ key, address, intervalMs }] : [],
 		);
+		// What was a gap may be wanted now.
+		this.#holes = this.#holes.filter((hole) => !hole.isGap || !this.#items.some((item) => inHole(item.address, [hole])));
 		const now = performance.now();
 		const intervals = new Set(this.#items.map((item) => item.intervalMs));
 		for (const interval of intervals) if (!this.#rounds.has(interval)) this.#rounds.set(interval, startRounds(interval, now));
@@ -253,10 +260,10 @@ class Poller implements SourceLink {
 		switch (outcome.kind) {
 			case 'answer':
 				if (this.#breaker.answered(block.unitId)) observer.event('note', 'unit-back', `unit ${block.unitId} answers again`);
+				if (this.#holes.every((hole) => hole.isGap)) this.#exceptionAdvice = null;
 				await this.#hand(samplesOf(block, outcome.bytes, receivedAt, outcome.ms));
 				return;
 			case 'exception':
-				this.#breaker.answered(block.unitId);
 				await this.#refused(block, outcome.code, receivedAt);
 				return;
 			case 'timeout':
@@ -310,11 +317,42 @@ class Poller implements SourceLink {
 		});
 		observer.exchange({ at: receivedAt, direction: 'in', ...exceptionExchange(block.unitId, block.table, code), failed: true });
 		const isAddress = code === 2 || code === 3;
+		const now = performance.now();
+		if (code === 10 || code === 11) {
+			// The gateway says what a time-out would: nobody is behind it.
+			if (this.#breaker.timedOut(block.unitId, now)) {
+				const others = new Set(this.#items.map((item) => item.address.unitId)).size - 1;
+				observer.event('warning', 'unit-silent', unitAdvice(block.unitId, others));
+			}
+		} else {
+			this.#breaker.answered(block.unitId);
+			if (asksForPatience(code)) this.#breaker.pause(block.unitId, now, PATIENCE_MS);
+		}
 		if (isAddress && block.items.length > 1) {
 			const { max_registers: most } = this.#settings;
 			const middle = block.items.length >> 1;
-			for (const half of [block.items.slice(0, middle), block.items.slice(middle)])
-				for (const part of planReads(half, this.#holes, most)) await this.#readBlock(part);
+			const halves = [block.items.slice(0, middle), block.items.slice(middle)];
+			const known = this.#holes.length;
+			for (const half of halves) {
+				for (const part of planReads(half, this.#holes, most)) {
+					if (this.#signal.aborted) return;
+					if (this.#breaker.allows(part.unitId, performance.now())) await this.#readBlock(part);
+				}
+			}
+			// Every wanted register answered: what the device refuses lies between the halves, where nobody wanted anything.
+			const from = Math.max(...(halves[0] ?? []).map(({ address }) => address.register + widthOf(address)));
+			const to = Math.min(...(halves[1] ?? []).map(({ address }) => address.register));
+			if (this.#holes.length === known && to > from && this.#link.isOpen) {
+				this.#holes.push({
+					unitId: block.unitId,
+					table: block.table,
+					from,
+					to,
+					probeAt: Number.POSITIVE_INFINITY,
+					code,
+					isGap: true,
+				});
+			}
 			this.#plans.clear();
 			return;
 		}
@@ -330,6 +368,7 @@ class Poller implements SourceLink {
 					to: address.register + widthOf(address),
 					probeAt: performance.now() + HOLE_PROBE_MS,
 					code,
+					isGap: false,
 				});
 				observer.event(
 					'warning',
@@ -365,9 +404,13 @@ class Poller implements SourceLink {
 			const items = this.#items.filter((item) => intervals.has(item.intervalMs) && inHole(item.address, [hole]));
 			hole.probeAt = now + HOLE_PROBE_MS;
 			for (const item of items) {
+				if (this.#signal.aborted) return;
+				if (!this.#breaker.allows(item.address.unitId, performance.now())) continue;
 				if (!this.#link.isOpen) await this.#reconnect();
 				const width = isBitTable(item.address.table) ? 1 : widthOf(item.address);
 				const outcome = await this.#link.read(item.address.unitId, item.address.table, item.address.register, width);
+				this.#context.observer.request(outcome.kind === 'answer', outcome.ms);
+				if (outcome.kind === 'timeout') this.#breaker.timedOut(item.address.unitId, performance.now());
 				if (outcome.kind === 'answer') {
 					this.#holes = this.#holes.filter((one) => one !== hole);
 					this.#exceptionAdvice = null;

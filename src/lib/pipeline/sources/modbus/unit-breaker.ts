@@ -13,15 +13,22 @@ interface UnitState {
 /** Which units of a connection are asked now. Times are monotonic milliseconds. */
 export class UnitBreaker {
 	readonly #units = new Map<number, UnitState>();
+	readonly #pausedUntil = new Map<number, number>();
 
 	/** True when the unit should be asked. */
 	allows(unitId: number, now: number): boolean {
+		if (now < (this.#pausedUntil.get(unitId) ?? -Infinity)) return false;
 		const state = this.#units.get(unitId);
 		return !state || state.timeouts < TIMEOUTS_TO_TRIP || now >= state.probeAt;
 	}
 
 	answered(unitId: number): boolean {
 		return this.#units.delete(unitId);
+	}
+
+	/** The unit asked for patience: left alone for a moment, without counting as silent. */
+	pause(unitId: number, now: number, ms: number): void {
+		this.#pausedUntil.set(unitId, now + ms);
 	}
 
 	/** Answers true when this time-out tripped the breaker. */
