@@ -5,7 +5,7 @@ import { vitePreprocess } from '@sveltejs/vite-plugin-svelte';
 export default {
 	preprocess: vitePreprocess(),
 	kit: {
-		adapter: adapter({ out: 'build' }),
+		adapter: adapter({ out: process.env.MILLRACE_BUILD ?? 'build/by-hand' }),
 		alias: { '#lib': 'src/lib' },
 		csp: {
 			mode: 'auto',

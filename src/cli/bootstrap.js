@@ -1,7 +1,7 @@
 // Edge: cli. Plain JavaScript without dependencies: it runs before anything is installed.
 import { spawnSync } from 'node:child_process';
 import { createHash } from 'node:crypto';
-import { existsSync, mkdirSync, readFileSync, readdirSync, statSync, writeFileSync } from 'node:fs';
+import { existsSync, mkdirSync, readFileSync, readdirSync, rmSync, statSync, writeFileSync } from 'node:fs';
 import { dirname, join, resolve } from 'node:path';
 import { fileURLToPath } from 'node:url';
 
@@ -146,23 +146,44 @@ function buildFingerprint() {
 	return hash.digest('hex');
 }
 
-/** Builds web and collector when their sources changed since the last build. */
+/** Builds kept beside the newest, since a running start may still serve from one of them. */
+const KEPT_BUILDS = 3;
+
+/**
+ * Builds web, collector and simulators when their sources changed; each state of the sources has a folder of its own, so that
+ * a build never changes files under a product that runs. Answers the folder.
+ * @returns {string}
+ */
 export function ensureBuild({ force = false } = {}) {
-	const stamp = join(ROOT, 'build/.stamp');
-	const wanted = buildFingerprint();
-	if (!force && existsSync(stamp) && readFileSync(stamp, 'utf8') === wanted) return;
+	const name = buildFingerprint().slice(0, 16);
+	const folder = join('build', name);
+	const stamp = join(ROOT, folder, '.stamp');
+	if (!force && existsSync(stamp)) return folder;
 	console.error('Building (when sources changed; about half a minute)');
+	rmSync(join(ROOT, folder), { recursive: true, force: true });
 	for (const [program, args] of /** @type {[string, string[]][]} */ ([
 		['node_modules/.bin/vite', ['build', '--logLevel', 'error']],
-		['node_modules/.bin/esbuild', ['src/collector/main.ts', 'simulators/main.ts', ...BUNDLE_FLAGS]],
-		[process.execPath, ['src/cli/third-parties.js', 'build/client/third-parties.txt']],
+		[
+			'node_modules/.bin/esbuild',
+			['src/collector/main.ts', 'simulators/main.ts', ...BUNDLE_FLAGS, `--outdir=${folder}/processes`],
+		],
+		[process.execPath, ['src/cli/third-parties.js', `${folder}/client/third-parties.txt`]],
 	])) {
-		const result = spawnSync(program, args, { cwd: ROOT, stdio: ['ignore', 'pipe', 'pipe'], encoding: 'utf8' });
+		const result = spawnSync(program, args, {
+			cwd: ROOT,
+			stdio: ['ignore', 'pipe', 'pipe'],
+			encoding: 'utf8',
+			env: { ...process.env, MILLRACE_BUILD: folder },
+		});
 		if (result.status !== 0) throw new Refusal(`Building failed at ${program}:\n${result.stdout}${result.stderr}`);
 	}
-	mkdirSync(join(ROOT, 'build'), { recursive: true });
-	// Kit's own steps touch nothing that is hashed, so the fingerprint from before still holds.
-	writeFileSync(stamp, wanted);
+	mkdirSync(join(ROOT, folder), { recursive: true });
+	writeFileSync(stamp, name);
+	const builds = readdirSync(join(ROOT, 'build'))
+		.map((entry) => ({ entry, at: statSync(join(ROOT, 'build', entry)).mtimeMs }))
+		.sort((a, b) => b.at - a.at);
+	for (const { entry } of builds.slice(KEPT_BUILDS)) rmSync(join(ROOT, 'build', entry), { recursive: true, force: true });
+	return folder;
 }
 
 /** The collector and the simulators as single files; packages stay outside, since some are native. */
@@ -174,7 +195,6 @@ const BUNDLE_FLAGS = [
 	'--packages=external',
 	'--sourcemap',
 	'--log-level=error',
-	'--outdir=build/processes',
 	'--outbase=.',
 ];
 

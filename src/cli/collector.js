@@ -5,12 +5,12 @@ import { allowTypeScript, ensureBuild, ensureNodePackages, Refusal, requireNode,
 await runMain(async () => {
 	requireNode();
 	ensureNodePackages();
-	ensureBuild();
+	const build = ensureBuild();
 	await allowTypeScript();
 	const { findRunningDatabase } = await import('./cluster.ts');
 	const url = await findRunningDatabase();
 	if (!url) throw new Refusal('No database found: start Millrace with `npm start` first, or set DATABASE_URL.');
-	const child = spawn(process.execPath, ['--enable-source-maps', 'build/processes/src/collector/main.js'], {
+	const child = spawn(process.execPath, ['--enable-source-maps', `${build}/processes/src/collector/main.js`], {
 		stdio: 'inherit',
 		env: { ...process.env, DATABASE_URL: url, MILLRACE_COLLECTOR: process.env.MILLRACE_COLLECTOR ?? `extra-${process.pid}` },
 	});

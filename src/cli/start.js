@@ -29,8 +29,8 @@ await runMain(async () => {
 	requireNode();
 	if (!process.env.DATABASE_URL) ensureDebianPackages(['postgresql'], { install: !hasFlag('--no-install') });
 	ensureNodePackages();
-	if (!hasFlag('--dev')) ensureBuild();
+	const build = hasFlag('--dev') ? null : ensureBuild();
 	await allowTypeScript();
 	const { start } = await import('./start.ts');
-	await start({ demo: !hasFlag('--no-demo'), dev: hasFlag('--dev') });
+	await start({ demo: !hasFlag('--no-demo'), build });
 });

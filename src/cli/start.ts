@@ -12,7 +12,8 @@ import { demoState, layDemo } from './lay-demo.ts';
 
 interface StartOptions {
 	demo: boolean;
-	dev: boolean;
+	/** Folder of the build to serve; null serves the sources with live reload. */
+	build: string | null;
 }
 
 /** Signals within this time count as one: a terminal sends Ctrl-C to the whole group, and npm passes it on once more. */
@@ -65,7 +66,7 @@ function settingsOrRefusal(): Config {
 }
 
 /** Starts everything, prints the address, and stays until a signal ends it. Throws a `Refusal` when something is the user's to mend. */
-export async function start({ demo, dev }: StartOptions): Promise<void> {
+export async function start({ demo, build }: StartOptions): Promise<void> {
 	const config = settingsOrRefusal();
 	mkdirSync(config.dataFolder, { recursive: true });
 	const processFile = join(config.dataFolder, 'processes.json');
@@ -165,7 +166,7 @@ export async function start({ demo, dev }: StartOptions): Promise<void> {
 
 		const env: NodeJS.ProcessEnv = {
 			...process.env,
-			NODE_ENV: dev ? 'development' : 'production',
+			NODE_ENV: build === null ? 'development' : 'production',
 			DATABASE_URL: databaseUrl,
 			MILLRACE_DATA: config.dataFolder,
 			MILLRACE_DEMO: withSimulators || held === 'demo' ? '1' : '0',
@@ -187,7 +188,10 @@ export async function start({ demo, dev }: StartOptions): Promise<void> {
 			kept.push(
 				keepRunning(
 					'simulators',
-					node('millrace-simulators', dev ? ['--import', 'tsx', 'simulators/main.ts'] : ['build/processes/simulators/main.js']),
+					node(
+						'millrace-simulators',
+						build === null ? ['--import', 'tsx', 'simulators/main.ts'] : [`${build}/processes/simulators/main.js`],
+					),
 					onLine,
 					remember,
 				),
@@ -198,9 +202,9 @@ export async function start({ demo, dev }: StartOptions): Promise<void> {
 				'web',
 				node(
 					'millrace-web',
-					dev
+					build === null
 						? ['node_modules/vite/bin/vite.js', 'dev', '--host', config.host, '--port', String(config.port)]
-						: ['build/index.js'],
+						: [`${build}/index.js`],
 				),
 				onLine,
 				remember,
@@ -211,7 +215,7 @@ export async function start({ demo, dev }: StartOptions): Promise<void> {
 				'collector',
 				node(
 					'millrace-collector',
-					dev ? ['--import', 'tsx', 'src/collector/main.ts'] : ['build/processes/src/collector/main.js'],
+					build === null ? ['--import', 'tsx', 'src/collector/main.ts'] : [`${build}/processes/src/collector/main.js`],
 				),
 				onLine,
 				remember,
