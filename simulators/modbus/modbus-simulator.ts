@@ -26,6 +26,10 @@ export interface Behaviour {
 	junk: Uint8Array | null;
 	/** Holds back the answer to the request of this count (from 1) until so many have come. */
 	hold: { request: number; until: number } | null;
+	/** Answers in the name of this unit, whoever was asked. */
+	answerAs: number | null;
+	/** Most registers the device gives at once; more is exception 3. */
+	mostRegisters: number;
 }
 
 export interface ModbusSimulator {
@@ -50,7 +54,7 @@ function answerPdu(pdu: Buffer, unitId: number, image: RegisterImage, behaviour:
 	const start = pdu.readUInt16BE(1);
 	const count = pdu.readUInt16BE(3);
 	const isBits = functionCode <= 2;
-	if (count < 1 || count > (isBits ? 2_000 : 125)) return exception(3);
+	if (count < 1 || count > (isBits ? 2_000 : behaviour.mostRegisters)) return exception(3);
 	if (start + count > 65_536) return exception(2);
 	const refusal = behaviour.exceptions.find(
 		(one) => (one.unitId === null || one.unitId === unitId) && one.from < start + count && start < one.to,
@@ -89,6 +93,8 @@ export async function startModbusSimulator(options: ModbusSimulatorOptions): Pro
 		bytePauseMs: 0,
 		junk: null,
 		hold: null,
+		answerAs: null,
+		mostRegisters: 125,
 	};
 	const sockets = new Set<Socket>();
 	const log: ModbusSimulator['log'] = [];
@@ -163,7 +169,7 @@ export async function startModbusSimulator(options: ModbusSimulatorOptions): Pro
 						const frame = Buffer.alloc(7 + answer.length);
 						header.copy(frame, 0);
 						frame.writeUInt16BE(answer.length + 1, 4);
-						frame[6] = unitId;
+						frame[6] = behaviour.answerAs ?? unitId;
 						answer.copy(frame, 7);
 						return frame;
 					};
@@ -175,7 +181,7 @@ export async function startModbusSimulator(options: ModbusSimulatorOptions): Pro
 					if (crc16(frame.subarray(0, 6)) !== frame.readUInt16LE(6)) continue;
 					const unitId = frame[0] ?? 0;
 					const wrap = (answer: Buffer) => {
-						const whole = Buffer.concat([Buffer.from([unitId]), answer, Buffer.alloc(2)]);
+						const whole = Buffer.concat([Buffer.from([behaviour.answerAs ?? unitId]), answer, Buffer.alloc(2)]);
 						whole.writeUInt16LE(crc16(whole.subarray(0, whole.length - 2)), whole.length - 2);
 						return whole;
 					};

@@ -169,15 +169,41 @@ describe('a device that misbehaves', () => {
 		// The library counts transaction ids modulo 256: an answer held back from request 2 bears the id of request 258.
 		const made = await device();
 		made.behaviour.hold = { request: 2, until: 258 };
+		// One unit and three blocks, so that request 258 asks for another register than request 2: nothing but the id could tell them apart.
+		const registers = [0, 150, 290];
 		const { samples } = await open(
 			made.port,
-			[0, 100, 200].map((register, i) => ({ key: i + 1, address: at(register, { unitId: i + 1 }), intervalMs: 20 })),
+			registers.map((register, i) => ({ key: i + 1, address: at(register), intervalMs: 20 })),
 		);
 		await until(() => made.requests > 300, 20_000);
-		const wrong = samples.filter((sample) => !sample.fault && valueOf(sample) !== sample.key * 1_000 + (sample.key - 1) * 100);
+		const wrong = samples.filter((sample) => !sample.fault && valueOf(sample) !== 1_000 + (registers[sample.key - 1] ?? 0));
 		expect(wrong).toEqual([]);
 		expect(samples.some((sample) => sample.fault?.code === 'no-answer')).toBe(true);
 	}, 30_000);
+
+	it('an exception in another unit’s name is not taken for this one’s', async () => {
+		const made = await device();
+		made.behaviour.exceptions = [{ unitId: null, from: 0, to: 300, code: 2 }];
+		made.behaviour.answerAs = 9;
+		const { samples } = await open(made.port, wanted([at(0)]));
+		await until(() => samples.length >= 2);
+		expect(samples.map((sample) => sample.fault?.code)).not.toContain('exception');
+	});
+
+	it('a device that gives fewer registers at once than the protocol allows is asked for fewer from then on', async () => {
+		const made = await device();
+		made.behaviour.mostRegisters = 40;
+		const { samples } = await open(
+			made.port,
+			wanted(
+				Array.from({ length: 100 }, (_, i) => at(i)),
+				50,
+			),
+		);
+		await until(() => samples.length >= 1_000);
+		expect(samples.every((sample) => sample.fault === null && valueOf(sample) === 999 + sample.key)).toBe(true);
+		expect(made.log.slice(-20).every((one) => one.count <= 40)).toBe(true);
+	});
 
 	it('a refused register that nobody wants is read over no more', async () => {
 		const made = await device();
@@ -315,6 +341,16 @@ describe('testing before saving', () => {
 				{ name: 'Unit 1', ok: true },
 			],
 		});
+	});
+
+	it('fails where the connection stands and the unit is silent, and passes where it answers with an exception', async () => {
+		const made = await device();
+		const { source } = await open(made.port, []);
+		made.behaviour.silent.add(1);
+		expect(await source.test(AbortSignal.timeout(5_000))).toMatchObject({ ok: false, advice: { code: 'units-silent' } });
+		made.behaviour.silent.clear();
+		made.behaviour.exceptions = [{ unitId: 1, from: 0, to: 10, code: 2 }];
+		expect(await source.test(AbortSignal.timeout(5_000))).toMatchObject({ ok: true, advice: null });
 	});
 
 	it('says in a sentence what is wrong with an address nobody listens on', async () => {

@@ -24,6 +24,8 @@ export class ModbusLink {
 	readonly #settings: ModbusSettings;
 	#client: ModbusRTU | null = null;
 	#lastEnd = -Infinity;
+	/** Unit id of the newest frame: the library checks it in answers, but not in exceptions. */
+	#answeredBy: number | null = null;
 
 	constructor(settings: ModbusSettings) {
 		this.#settings = settings;
@@ -62,6 +64,9 @@ export class ModbusLink {
 		} finally {
 			clearTimeout(limit);
 		}
+		portOf(client).on('data', (frame: Buffer) => {
+			this.#answeredBy = frame[0] ?? null;
+		});
 		client.setTimeout(timeoutMs);
 		this.#client = client;
 		// A device that wants a pause wants it after the connection too.
@@ -79,6 +84,7 @@ export class ModbusLink {
 		}
 		const begun = performance.now();
 		try {
+			this.#answeredBy = null;
 			client.setID(unitId);
 			const { buffer } = await request(client, table, start, count);
 			const expected = isBitTable(table) ? Math.ceil(count / 8) : count * 2;
@@ -90,6 +96,10 @@ export class ModbusLink {
 		} catch (thrown) {
 			const error = named(thrown as ClientError);
 			const ms = performance.now() - begun;
+			if (typeof error.modbusCode === 'number' && this.#answeredBy !== unitId) {
+				this.drop();
+				return { kind: 'broken', detail: `unit ${this.#answeredBy} answered for unit ${unitId}`, ms };
+			}
 			if (typeof error.modbusCode === 'number') return { kind: 'exception', code: error.modbusCode, ms };
 			this.drop();
 			return error.code === 'ETIMEDOUT' ? { kind: 'timeout', ms } : { kind: 'broken', detail: error.message, ms };
@@ -104,6 +114,11 @@ export class ModbusLink {
 		this.#client = null;
 		if (client) destroy(client);
 	}
+}
+
+/** The library's own port, which emits each frame as unit, function, data and check sum. */
+function portOf(client: ModbusRTU): NodeJS.EventEmitter {
+	return (client as unknown as { _port: NodeJS.EventEmitter })._port;
 }
 
 function request(client: ModbusRTU, table: Table, start: number, count: number): Promise<{ buffer: Buffer }> {

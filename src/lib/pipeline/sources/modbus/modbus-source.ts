@@ -54,8 +54,8 @@ export function createModbusSource(settings: ModbusSettings, context: SourceCont
 			// Before anything is mapped nobody knows which units there are: the first is asked for one register. An exception is an answer too.
 			const step = await testUnit(link, 1, signal);
 			link.drop();
-			steps.push(step);
-			return { ok: true, steps, advice: step.ok ? null : silentAdvice(placeOf(settings), [1], settings.timeout_ms) };
+			steps.push(step.ok ? step : { ...step, detail: `${step.detail}; other units can be asked once tags are mapped to them` });
+			return { ok: step.ok, steps, advice: step.ok ? null : silentAdvice(placeOf(settings), [1], settings.timeout_ms) };
 		},
 	};
 }
@@ -67,7 +67,8 @@ async function testUnit(link: ModbusLink, unitId: number, signal: AbortSignal): 
 	const ms = Math.round(outcome.ms);
 	if (outcome.kind === 'answer') return { name, ok: true, detail: `answers in ${ms} ms`, ms };
 	if (outcome.kind === 'exception')
-		return { name, ok: !asksForPatience(outcome.code), detail: `answers with ${exceptionWords(outcome.code)}`, ms };
+		// Every exception proves that somebody lives there, but those by which a gateway says that nobody does.
+		return { name, ok: outcome.code !== 10 && outcome.code !== 11, detail: `answers with ${exceptionWords(outcome.code)}`, ms };
 	return { name, ok: false, detail: outcome.kind === 'timeout' ? `no answer in ${ms} ms` : outcome.detail, ms };
 }
 
@@ -87,10 +88,13 @@ class Poller implements SourceLink {
 	readonly #underway = new Set<Promise<unknown>>();
 	readonly #idle: (() => void)[] = [];
 	#isReading = false;
+	/** Most registers a read; less than the setting once the device has refused as many. */
+	#most: number;
 	#exceptionAdvice: Advice | null = null;
 
 	constructor(settings: ModbusSettings, context: SourceContext, link: ModbusLink, emit: Emit, signal: AbortSignal) {
 		this.#settings = settings;
+		this.#most = settings.max_registers;
 		this.#context = context;
 		this.#link = link;
 		this.#emit = emit;
@@ -243,7 +247,7 @@ class Poller implements SourceLink {
 			plan = planReads(
 				this.#items.filter((item) => wanted.has(item.intervalMs) && !inHole(item.address, this.#holes)),
 				this.#holes,
-				this.#settings.max_registers,
+				this.#most,
 			);
 			this.#plans.set(key, plan);
 		}
@@ -329,12 +333,11 @@ class Poller implements SourceLink {
 			if (asksForPatience(code)) this.#breaker.pause(block.unitId, now, PATIENCE_MS);
 		}
 		if (isAddress && block.items.length > 1) {
-			const { max_registers: most } = this.#settings;
 			const middle = block.items.length >> 1;
 			const halves = [block.items.slice(0, middle), block.items.slice(middle)];
 			const known = this.#holes.length;
 			for (const half of halves) {
-				for (const part of planReads(half, this.#holes, most)) {
+				for (const part of planReads(half, this.#holes, this.#most)) {
 					if (this.#signal.aborted) return;
 					if (this.#breaker.allows(part.unitId, performance.now())) await this.#readBlock(part);
 				}
@@ -352,6 +355,15 @@ class Poller implements SourceLink {
 					code,
 					isGap: true,
 				});
+			}
+			if (code === 3 && this.#holes.length === known && to <= from && this.#link.isOpen) {
+				// Nothing lies between and both halves answered: the device gives fewer registers at once.
+				this.#most = Math.max(1, Math.min(this.#most, Math.ceil(block.count / 2)));
+				observer.event(
+					'note',
+					'fewer-registers',
+					`the device refuses ${block.count} registers at once; reads ask for at most ${this.#most} from here on`,
+				);
 			}
 			this.#plans.clear();
 			return;
