@@ -34,6 +34,8 @@ export interface OpcuaSimulatorOptions {
 	/** Namespace of the variables; node ids are `nsu=NAMESPACE;s=NAME`. */
 	namespace: string;
 	variables: readonly VariableSpec[];
+	/** Longest queue of an item, whatever a client asks for, as small servers have it. */
+	longestQueue?: number;
 	/** Users that may open a session; anybody without a name unless given. */
 	users?: Readonly<Record<string, string>>;
 }
@@ -110,6 +112,16 @@ export async function startOpcuaSimulator(options: OpcuaSimulatorOptions): Promi
 			const known = last.get(spec.name);
 			if (known) write(spec.name, known);
 			else if (spec.value !== undefined) write(spec.name, { value: spec.value, at: Date.now(), isBad: false });
+		}
+		const { longestQueue } = options;
+		if (longestQueue !== undefined) {
+			server.on('session_activated', (session) => {
+				session.on('new_subscription', (subscription) => {
+					subscription.on('monitoredItem', (item: { queueSize: number }) => {
+						item.queueSize = Math.min(item.queueSize, longestQueue);
+					});
+				});
+			});
 		}
 		await server.start();
 	};

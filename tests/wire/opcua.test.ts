@@ -146,6 +146,29 @@ describe('reading by subscription', () => {
 });
 
 describe('a value that was dropped before this one', () => {
+	it('is noted where a server keeps too short a queue between two publishings', async () => {
+		const small = await startOpcuaSimulator({
+			port: await freePort(),
+			namespace: NAMESPACE,
+			longestQueue: 3,
+			variables: [{ name: 'FAST', value: 0 }],
+		});
+		running.push(() => small.stop());
+		const { samples, events } = await open(wanted(['FAST'], 20), {
+			endpoint_url: small.endpointUrl,
+			publishing_interval_ms: 1_000,
+		});
+		await until(() => samples.length >= 1);
+		for (let i = 1; i <= 120; i += 1) {
+			small.set('FAST', i);
+			await new Promise((resolve) => setTimeout(resolve, 20));
+		}
+		await until(() => valueOf(samples.at(-1)) === 120);
+		expect(samples.length).toBeLessThan(60);
+		expect(samples.some((sample) => sample.gapBefore === true)).toBe(true);
+		expect(events).toContain('values-dropped');
+	}, 20_000);
+
 	it.each([
 		['Overflow | InfoTypeDataValue', 0x00000480],
 		['Overflow', 0x00000080],
