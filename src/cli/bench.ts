@@ -6,12 +6,11 @@ import { join } from 'node:path';
 import { pipeline } from 'node:stream/promises';
 import { Readable } from 'node:stream';
 import { from as copyFrom } from 'pg-copy-streams';
-import { createFeedLines } from '#lib/pipeline/feeds/reading-json.ts';
+import { feedLines } from '#lib/pipeline/feeds/feed-lines.ts';
 import { copyLines } from '#lib/pipeline/store/copy-format.ts';
 import { createCopyWriter } from '#lib/pipeline/store/copy-writer.ts';
-import { readFeed, resolveCursor } from '#lib/pipeline/store/find-feed.ts';
+import { readFeedHead, resolveCursor } from '#lib/pipeline/store/find-feed.ts';
 import { ensurePartitionsAhead } from '#lib/pipeline/store/partitions.ts';
-import { tagFacts } from '#lib/pipeline/store/tag-facts.ts';
 import { EMPTY_BATCH, type LatestUpdate, type StoredReading } from '#lib/pipeline/store/write-batch.ts';
 import { freshState, judge } from '#lib/pipeline/evaluate/evaluate.ts';
 import { createPool, type Pool } from '#lib/server/db/pool.ts';
@@ -148,19 +147,11 @@ async function feed(pool: Pool, url: string, siteId: number): Promise<Line> {
 		let started = performance.now();
 		const from = await resolveCursor(pool, siteId, '0');
 		if (!from.ok) throw new Error(from.reason);
-		let place = from.value;
-		delivered = 0;
-		const lineOf = createFeedLines(await tagFacts(pool, siteId));
+		const head = await readFeedHead(pool, siteId);
 		let bytes = 0;
-		for (;;) {
-			const page = await readFeed(pool, siteId, place, { limit: 10_000 });
-			if (page.entries.length === 0) break;
-			let text = '';
-			for (const entry of page.entries) text += lineOf(entry);
-			bytes += text.length;
-			delivered += page.entries.length;
-			place = { ...place, position: page.position };
-		}
+		for await (const chunk of feedLines(pool, { siteId, after: from.value.position, last: head.position, form: 'ndjson' }))
+			bytes += chunk.length;
+		delivered = head.position - from.value.position;
 		if (bytes === 0) throw new Error('the feed was empty');
 		ours.push((delivered / (performance.now() - started)) * 1_000);
 

@@ -2,13 +2,15 @@ import pg from 'pg';
 import { afterAll, beforeAll, describe, expect, it } from 'vitest';
 import { createPool, type Pool } from '#lib/server/db/pool.ts';
 import { createCopyWriter, type CopyWriter } from '#lib/pipeline/store/copy-writer.ts';
-import { currentCursor, readFeed, resolveCursor } from '#lib/pipeline/store/find-feed.ts';
+import { currentCursor, findBehind, readFeed, readFeedHead, resolveCursor } from '#lib/pipeline/store/find-feed.ts';
 import { findLatest } from '#lib/pipeline/store/find-latest.ts';
 import { findReadings } from '#lib/pipeline/store/find-readings.ts';
 import { findTrend } from '#lib/pipeline/store/find-trend.ts';
 import { dropExpired, ensurePartitionsAhead } from '#lib/pipeline/store/partitions.ts';
 import type { LatestUpdate, TagAlarmChange } from '#lib/pipeline/store/write-batch.ts';
+import { feedLines } from '#lib/pipeline/feeds/feed-lines.ts';
 import { createFeedWatch } from '#lib/pipeline/feeds/feed.ts';
+import { createFeedStream } from '#lib/pipeline/feeds/stream.ts';
 import { cloneDatabase } from '../support/cluster.ts';
 import { batchOf, siteWithTags, storedReading } from '../support/readings.ts';
 
@@ -223,7 +225,7 @@ describe('the cursor never skips', () => {
 		expect(seen.size).toBe(sent);
 		expect([...seen.values()].every((count) => count === 1)).toBe(true);
 		expect(sent).toBeGreaterThan(1_000);
-	}, 120_000);
+	}, 240_000);
 
 	it('moves on past what a filter hides', async () => {
 		const { siteId, tagIds } = await siteWithTags(pool, 2);
@@ -232,7 +234,7 @@ describe('the cursor never skips', () => {
 		await writer.write(batchOf(Array.from({ length: 50 }, (_, i) => storedReading(siteId, tagIds[0] ?? 0, now + i, i))));
 		const page = await readFeed(pool, siteId, from.value, { limit: 10, tagIds: new Set([tagIds[1] ?? 0]) });
 		expect(page.entries).toEqual([]);
-		expect(page.behind).toEqual({ seconds: 0, readings: 0 });
+		expect(await findBehind(pool, siteId, page.position)).toEqual({ seconds: 0, readings: 0 });
 	});
 
 	it('says gone for another epoch, for a place ahead and for what is none', async () => {
@@ -273,6 +275,81 @@ describe('the cursor never skips', () => {
 			expect(performance.now() - committed).toBeLessThan(500); // the look of once a second would come later
 		} finally {
 			await watch.close();
+		}
+	});
+});
+
+describe('readers of the feed', () => {
+	it('get as lines what they get a page at a time, whole commits or parts of them, filtered or not', async () => {
+		const { siteId, tagIds } = await siteWithTags(pool, 2);
+		const [a = 0, b = 0] = tagIds;
+		for (let n = 0; n < 30; n += 1)
+			await writer.write(
+				batchOf(Array.from({ length: 7 }, (_, i) => storedReading(siteId, i % 2 ? a : b, now + n * 10 + i, n * 10 + i))),
+			);
+		const head = await readFeedHead(pool, siteId);
+		const linesOf = async (after: number, last: number, tags?: ReadonlySet<number>) => {
+			let text = '';
+			for await (const chunk of feedLines(pool, { siteId, after, last, tagIds: tags, form: 'ndjson' }))
+				text += Buffer.from(chunk).toString();
+			return text
+				.split('\n')
+				.filter(Boolean)
+				.map((line) => JSON.parse(line) as { value: number; tag_id: number });
+		};
+		const all = (await readAll(siteId, '0')).values;
+		expect((await linesOf(0, head.position)).map((line) => line.value)).toEqual(all);
+		// From the middle of one commit to the middle of another.
+		expect((await linesOf(3, head.position - 3)).map((line) => line.value)).toEqual(all.slice(3, -3));
+		const own = await linesOf(0, head.position, new Set([a]));
+		expect(own).toHaveLength(90);
+		expect(own.every((line) => line.tag_id === a)).toBe(true);
+	});
+
+	it('two hundred open streams at one place each get every reading, and cost the database a few looks', async () => {
+		const { siteId, tagIds } = await siteWithTags(pool, 1);
+		const own = createPool(database.url, { name: 'streams', max: 4 });
+		const watch = createFeedWatch(own);
+		const stop = new AbortController();
+		try {
+			let looks = 0;
+			const query = own.query.bind(own) as (...args: unknown[]) => unknown;
+			own.query = ((...args: unknown[]) => {
+				if (String(args[0]).includes('feed_journal')) looks += 1;
+				return query(...args);
+			}) as typeof own.query;
+			const from = await resolveCursor(pool, siteId, undefined);
+			if (!from.ok) throw new Error(from.reason);
+			const place = from.value;
+			const readers = Array.from({ length: 200 }, async () => {
+				const stream = createFeedStream(own, watch, { siteId, from: place, signal: AbortSignal.any([stop.signal]) });
+				const values: number[] = [];
+				let text = '';
+				for await (const chunk of stream as unknown as AsyncIterable<Uint8Array>) {
+					text += Buffer.from(chunk).toString();
+					const events = text.split('\n\n');
+					text = events.pop() ?? '';
+					for (const event of events) {
+						const data = /^data: (.*)$/m.exec(event)?.[1];
+						if (data) for (const item of (JSON.parse(data) as { items: { value: number }[] }).items) values.push(item.value);
+					}
+					if (values.length >= 50) break;
+				}
+				return values;
+			});
+			for (let n = 0; n < 5; n += 1) {
+				await new Promise((resolve) => setTimeout(resolve, 150));
+				await writer.write(
+					batchOf(Array.from({ length: 10 }, (_, i) => storedReading(siteId, tagIds[0] ?? 0, now + n * 10 + i, n * 10 + i))),
+				);
+			}
+			const expected = Array.from({ length: 50 }, (_, i) => i);
+			for (const values of await Promise.all(readers)) expect(values).toEqual(expected);
+			expect(looks).toBeLessThan(100); // a look a stream and commit would be a thousand
+		} finally {
+			stop.abort();
+			await watch.close();
+			await own.end();
 		}
 	});
 });

@@ -2,7 +2,7 @@
 import type { Client, Pool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
 
-/** Readers look once a second by themselves: a bell may be lost, a look is not. */
+/** One look a second for all readers of the process: a bell may be lost, a look is not. */
 const LOOK_MS = 1_000;
 const RETRY_MS = 1_000;
 
@@ -19,12 +19,33 @@ export interface FeedWatch {
 export function createFeedWatch(pool: Pool): FeedWatch {
 	const sleepers = new Map<number, Set<Wake>>();
 	let client: Client | null = null;
+	/** The place last heard of, a site. Only believed for a moment: a restore sets positions back. */
+	const heard = new Map<number, { position: number; at: number }>();
 	let isClosed = false;
 	let timer: NodeJS.Timeout | undefined;
 
 	const wakeAll = (siteId: number, position: number) => {
-		for (const wake of sleepers.get(siteId) ?? []) wake(position);
+		heard.set(siteId, { position, at: performance.now() });
+		for (const wake of [...(sleepers.get(siteId) ?? [])]) wake(position);
 	};
+	let isLooking = false;
+	const look = async () => {
+		const sites = [...sleepers].filter(([, wakes]) => wakes.size > 0).map(([siteId]) => siteId);
+		if (isLooking || sites.length === 0) return;
+		isLooking = true;
+		try {
+			const heads = await pool.query<{ site_id: number; position: number }>(
+				'SELECT site_id, position FROM feed_heads WHERE site_id = ANY($1)',
+				[sites],
+			);
+			for (const head of heads.rows) wakeAll(head.site_id, head.position);
+		} catch (error) {
+			log.debug({ error: (error as Error).message }, 'looking for the feed failed');
+		} finally {
+			isLooking = false;
+		}
+	};
+	const looking = setInterval(() => void look(), LOOK_MS);
 	const listen = async () => {
 		if (isClosed) return;
 		try {
@@ -67,18 +88,22 @@ export function createFeedWatch(pool: Pool): FeedWatch {
 					signal?.removeEventListener('abort', done);
 					resolve();
 				};
-				const wake: Wake = (reached) => {
-					if (reached > position) done();
+				const wake: Wake = (place) => {
+					if (place > position) done();
 				};
-				const limit = setTimeout(done, Math.min(waitMs, LOOK_MS));
+				const limit = setTimeout(done, waitMs);
 				set.add(wake);
-				if (signal?.aborted) done();
+				const last = heard.get(siteId);
+				// A bell that rang between the reader's look and now is not lost.
+				const isBehind = last !== undefined && last.position > position && performance.now() - last.at < LOOK_MS;
+				if (signal?.aborted || isBehind) done();
 				else signal?.addEventListener('abort', done);
 			});
 		},
 		async close() {
 			isClosed = true;
 			clearTimeout(timer);
+			clearInterval(looking);
 			for (const set of sleepers.values()) for (const wake of [...set]) wake(Infinity);
 			const open = client;
 			client = null;

@@ -60,33 +60,69 @@ export function toFeedItem(entry: FeedEntryLike, facts: ReadonlyMap<number, Fact
 	};
 }
 
-/** Writes feed entries as NDJSON lines; what repeats is made once: the tag's part a tag, the quality's part a code, the time's a millisecond. */
-export function createFeedLines(facts: ReadonlyMap<number, FactsLike>): (entry: FeedEntryLike) => string {
-	const heads = new Map<number, [string, string]>();
-	const qualities = new Map<number, string>();
-	let lastAt = Number.NaN;
-	let lastText = '';
-	return (entry) => {
-		if (entry.kind === 'event') return `${JSON.stringify(toFeedItem(entry, facts))}\n`;
-		let head = heads.get(entry.tagId);
-		if (!head) {
-			const known = facts.get(entry.tagId);
-			head = [
-				`{"kind":"reading","tag_id":${entry.tagId},"tag":${JSON.stringify(known?.name ?? '')},"at":"`,
-				`,"unit":${JSON.stringify(known?.unit ?? '')},"quality":`,
-			];
-			heads.set(entry.tagId, head);
-		}
-		let quality = qualities.get(entry.quality);
-		if (quality === undefined) {
-			quality = `${JSON.stringify(qualityJson(entry.quality))},"time_from":`;
-			qualities.set(entry.quality, quality);
-		}
-		if (entry.at !== lastAt) {
-			lastAt = entry.at;
-			lastText = new Date(entry.at).toISOString();
-		}
-		return `${head[0]}${lastText}","value":${entry.value}${head[1]}${quality}${entry.isHubTime ? '"hub"' : '"source"'}${entry.isTest ? ',"test":true' : ''}}\n`;
+/** A feed's readings as NDJSON text, and its events. */
+export interface FeedLines {
+	reading(
+		tagId: number,
+		at: number,
+		value: number | null,
+		quality: number,
+		flags: { isHubTime: boolean; isTest: boolean },
+	): string;
+	event(event: Extract<FeedEntryLike, { kind: 'event' }>['event']): string;
+}
+
+/** Two and three digits of clock, made once. */
+const SECONDS = Array.from({ length: 60 }, (_, s) => String(s).padStart(2, '0'));
+const MILLISECONDS = Array.from({ length: 1_000 }, (_, ms) => `.${String(ms).padStart(3, '0')}Z","value":`);
+const MINUTE_MS = 60_000;
+
+/**
+ * Writes NDJSON lines; what repeats is made once: the tag's part a tag, the end of the line a tag and quality, the time's a minute.
+ * The lines are those of `JSON.stringify(toFeedItem(…))`.
+ */
+export function createFeedLines(facts: ReadonlyMap<number, FactsLike>): FeedLines {
+	interface Parts {
+		head: string;
+		tails: Map<number, string>;
+		quality: number;
+		tail: string;
+	}
+	const tags = new Map<number, Parts>();
+	let minute = Number.NaN;
+	let minuteText = '';
+	const tailOf = (tagId: number, quality: number, isHubTime: boolean, isTest: boolean) =>
+		`,"unit":${JSON.stringify(facts.get(tagId)?.unit ?? '')},"quality":${JSON.stringify(qualityJson(quality))},"time_from":${isHubTime ? '"hub"' : '"source"'}${isTest ? ',"test":true' : ''}}\n`;
+	return {
+		reading(tagId, at, value, quality, { isHubTime, isTest }) {
+			let tag = tags.get(tagId);
+			if (!tag) {
+				const name = JSON.stringify(facts.get(tagId)?.name ?? '');
+				tag = {
+					head: `{"kind":"reading","tag_id":${tagId},"tag":${name},"at":"`,
+					tails: new Map(),
+					quality: Number.NaN,
+					tail: '',
+				};
+				tags.set(tagId, tag);
+			}
+			// A StatusCode is below 2^32, so the two flags stand above it.
+			const key = quality + (isHubTime ? 2 ** 32 : 0) + (isTest ? 2 ** 33 : 0);
+			if (tag.quality !== key) {
+				tag.quality = key;
+				tag.tail = tag.tails.get(key) ?? tailOf(tagId, quality, isHubTime, isTest);
+				tag.tails.set(key, tag.tail);
+			}
+			const begin = Math.floor(at / MINUTE_MS) * MINUTE_MS;
+			if (begin !== minute) {
+				minute = begin;
+				minuteText = new Date(begin).toISOString().slice(0, -7);
+			}
+			const ms = at - begin;
+			const second = Math.floor(ms / 1_000);
+			return `${tag.head}${minuteText}${SECONDS[second]}${MILLISECONDS[ms - second * 1_000]}${value === null ? 'null' : String(value)}${tag.tail}`;
+		},
+		event: (event) => `${JSON.stringify(toFeedItem({ kind: 'event', event }, facts))}\n`,
 	};
 }
 

@@ -1,15 +1,11 @@
 // Edge: feeds. May touch: store finders, the feed's watch. Never sources.
 import type { Pool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
-import { readFeed } from '#lib/pipeline/store/find-feed.ts';
-import { tagFacts } from '#lib/pipeline/store/tag-facts.ts';
 import type { FeedWatch } from './feed.ts';
-import { toFeedItem } from './reading-json.ts';
+import { filterName, readStreamPage } from './stream-pages.ts';
 
 /** A comment this often keeps proxies from closing an idle stream. */
 const COMMENT_MS = 15_000;
-/** Most readings in one event. */
-const PAGE = 2_000;
 
 export interface StreamRequest {
 	siteId: number;
@@ -43,6 +39,7 @@ export function createFeedStream(pool: Pool, watch: FeedWatch, request: StreamRe
 	let at = request.from;
 	let spokeAt = performance.now();
 	let isFirst = true;
+	const filter = filterName(request.tagIds);
 
 	return new ReadableStream<Uint8Array>(
 		{
@@ -55,17 +52,11 @@ export function createFeedStream(pool: Pool, watch: FeedWatch, request: StreamRe
 				}
 				while (!stop.signal.aborted) {
 					try {
-						const page = await readFeed(pool, request.siteId, at, { limit: PAGE, tagIds: request.tagIds });
+						const page = await readStreamPage(pool, { siteId: request.siteId, from: at, tagIds: request.tagIds, filter });
 						if (stop.signal.aborted) break;
 						at = { ...at, position: page.position };
-						if (page.entries.length > 0) {
-							const facts = await tagFacts(
-								pool,
-								request.siteId,
-								page.entries.flatMap((entry) => (entry.kind === 'reading' ? [entry.tagId] : [])),
-							);
-							const items = page.entries.map((entry) => toFeedItem(entry, facts));
-							controller.enqueue(encoder.encode(`id: ${page.cursor}\nevent: readings\ndata: ${JSON.stringify({ items })}\n\n`));
+						if (page.event) {
+							controller.enqueue(page.event);
 							spokeAt = performance.now();
 							request.onDelivered?.(page.position);
 							return;

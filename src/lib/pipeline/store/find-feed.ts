@@ -24,8 +24,6 @@ export interface FeedPage {
 	/** Cursor after the last place looked at, hidden ones included. */
 	cursor: string;
 	position: number;
-	/** How far the reader is behind after this page. */
-	behind: { seconds: number; readings: number };
 }
 
 export interface FeedHead {
@@ -76,8 +74,34 @@ export async function resolveCursor(
 	return ok({ position: cursor.position, epoch: head.epoch });
 }
 
-/** Journal rows fetched at a time; a row holds one commit. */
-const ROWS = 64;
+/** Most journal rows of one query; a row holds one commit. */
+const ROWS = 256;
+/** Positions that one query looks at where a filter may hide most of them. */
+const HIDDEN_WINDOW = 20_000;
+
+/** One commit in the journal: packed readings, or one event. */
+export interface JournalRow {
+	first_position: number;
+	last_position: number;
+	readings: Buffer | null;
+	event: FeedEvent | null;
+}
+
+/**
+ * Journal rows after a position in their order, none that begins past `upTo` but the first. The inner query only walks the index:
+ * what the page does not need is neither read from disk nor sent, so that a reader far behind pays for its page and not for its lag.
+ */
+export async function readJournal(pool: Pool, siteId: number, after: number, upTo: number): Promise<JournalRow[]> {
+	const found = await pool.query<JournalRow>(
+		`SELECT first_position, last_position, readings, event FROM (
+			SELECT near.*, row_number() OVER (ORDER BY last_position) AS place FROM (
+				SELECT first_position, last_position, readings, event FROM feed_journal WHERE site_id = $1 AND last_position > $2 ORDER BY last_position LIMIT $4
+			) AS near
+		) AS placed WHERE first_position <= $3 OR place = 1 ORDER BY last_position`,
+		[siteId, after, upTo, Math.max(1, Math.min(ROWS, upTo - after))],
+	);
+	return found.rows;
+}
 
 /**
  * Up to `limit` entries after a position, in the one order that all readers share. The position moves on past what `tagIds` hides.
@@ -91,58 +115,33 @@ export async function readFeed(
 ): Promise<FeedPage> {
 	const entries: FeedEntry[] = [];
 	let position = from.position;
-	let isFull = false;
-	while (!isFull) {
-		const found = await pool.query<{
-			first_position: number;
-			last_position: number;
-			readings: Buffer | null;
-			event: FeedEvent | null;
-		}>(
-			`SELECT first_position, last_position, readings, event FROM feed_journal WHERE site_id = $1 AND last_position > $2 ORDER BY last_position LIMIT ${ROWS}`,
-			[siteId, position],
-		);
-		for (const row of found.rows) {
+	while (entries.length < limit) {
+		const rows = await readJournal(pool, siteId, position, position + (tagIds ? HIDDEN_WINDOW : limit - entries.length));
+		if (rows.length === 0) break;
+		for (const row of rows) {
+			if (entries.length >= limit) break;
 			if (row.event) {
-				if (entries.length >= limit) {
-					isFull = true;
-					break;
-				}
 				if (!tagIds || row.event.tagId === undefined || tagIds.has(row.event.tagId))
 					entries.push({ kind: 'event', position: row.last_position, event: row.event });
 				position = row.last_position;
 				continue;
 			}
-			if (!row.readings) continue;
+			if (!row.readings) {
+				position = row.last_position;
+				continue;
+			}
 			visitPacked(row.readings, Math.max(0, position - row.first_position + 1), (tagId, at, value, quality, flags, index) => {
-				if (entries.length >= limit) {
-					isFull = true;
-					return true;
-				}
+				if (entries.length >= limit) return true;
 				position = row.first_position + index;
-				if (!tagIds || tagIds.has(tagId))
-					entries.push({
-						kind: 'reading',
-						position,
-						tagId,
-						at,
-						value,
-						quality,
-						isHubTime: flags.isHubTime,
-						isTest: flags.isTest,
-					});
+				if (!tagIds || tagIds.has(tagId)) {
+					const { isHubTime, isTest } = flags;
+					entries.push({ kind: 'reading', position, tagId, at, value, quality, isHubTime, isTest });
+				}
 				return false;
 			});
-			if (isFull) break;
 		}
-		if (found.rows.length < ROWS) break;
 	}
-	return {
-		entries,
-		position,
-		cursor: formatCursor({ epoch: from.epoch, position }),
-		behind: await findBehind(pool, siteId, position),
-	};
+	return { entries, position, cursor: formatCursor({ epoch: from.epoch, position }) };
 }
 
 /** How many readings wait behind a position, and how long the oldest of them has waited. */

@@ -63,6 +63,14 @@ export function countPacked(buffer: Buffer): number {
 	return buffer.readUInt32LE(4);
 }
 
+/** The tags that a packed row speaks of. */
+export function listPackedTags(buffer: Buffer): Set<number> {
+	const n = countPacked(buffer);
+	const ids = new Set<number>();
+	for (let i = 0; i < n; i += 1) ids.add(buffer.readInt32LE(HEADER + i * 4));
+	return ids;
+}
+
 /** Reads packed readings from index `from` on, calling `visit` for each. */
 export function visitPacked(
 	buffer: Buffer,

@@ -1,8 +1,9 @@
 import { z } from 'zod';
 import { noteReader } from '#lib/pipeline/feeds/reader-lag.ts';
-import { createFeedLines, FEED_CSV_HEADER, feedCsvLine, toFeedItem } from '#lib/pipeline/feeds/reading-json.ts';
+import { entriesToLines, feedLines } from '#lib/pipeline/feeds/feed-lines.ts';
+import { toFeedItem } from '#lib/pipeline/feeds/reading-json.ts';
 import { formatCursor } from '#lib/pipeline/store/feed-cursor.ts';
-import { readFeed, readFeedHead, type FeedEntry, type FeedPage } from '#lib/pipeline/store/find-feed.ts';
+import { findBehind, readFeed, readFeedHead, type FeedEntry, type FeedPage } from '#lib/pipeline/store/find-feed.ts';
 import { tagFacts } from '#lib/pipeline/store/tag-facts.ts';
 import { feedItem } from '#lib/server/feed/answer-schema.ts';
 import { resolvePlace, resolveTags, type Place } from '#lib/server/feed/resolve-place.ts';
@@ -13,9 +14,6 @@ import { intParam, namesParam } from '#lib/server/http/parameters.ts';
 import { Problem } from '#lib/server/http/problem.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 import { shutdownSignal } from '#lib/server/shutdown.ts';
-
-/** Entries fetched at a time while a whole stretch streams. */
-const STREAM_PAGE = 10_000;
 
 const tagIdsOf = (entries: readonly FeedEntry[]) => entries.flatMap((entry) => (entry.kind === 'reading' ? [entry.tagId] : []));
 
@@ -47,12 +45,13 @@ export const GET = api(
 			if (actor.kind === 'key') noteReader(pool, { id: actor.id, name: actor.name, siteId: site.id, position });
 		};
 
+		const form = answerType === CSV_TYPE ? 'csv' : 'ndjson';
 		if (answerType !== JSON_TYPE && query.limit === undefined) {
 			const head = await readFeedHead(pool, site.id);
 			headers.set('x-next-cursor', formatCursor(head));
 			note(head.position);
-			const pages = pagesUpTo(pool, site.id, place.value, head.position, tagIds);
-			return lineStream(pool, site.id, pages, answerType === CSV_TYPE);
+			const stretch = { siteId: site.id, after: place.value.position, last: head.position, tagIds, form } as const;
+			return toResponse(toStream(feedLines(pool, stretch)), form);
 		}
 		const signal = AbortSignal.any([request.signal, shutdownSignal]);
 		const page = await waitForEntries(pool, site.id, place.value, {
@@ -62,18 +61,18 @@ export const GET = api(
 			signal,
 		});
 		note(page.position);
+		const facts = await tagFacts(pool, site.id, tagIdsOf(page.entries));
 		if (answerType !== JSON_TYPE) {
 			headers.set('x-next-cursor', page.cursor);
-			return lineStream(pool, site.id, one(page.entries), answerType === CSV_TYPE);
+			return toResponse(entriesToLines(page.entries, facts, form), form);
 		}
-		const facts = await tagFacts(pool, site.id, tagIdsOf(page.entries));
-		return { items: page.entries.map((entry) => toFeedItem(entry, facts)), cursor: page.cursor, behind: page.behind };
+		return {
+			items: page.entries.map((entry) => toFeedItem(entry, facts)),
+			cursor: page.cursor,
+			behind: await findBehind(pool, site.id, page.position),
+		};
 	},
 );
-
-async function* one(entries: FeedEntry[]): AsyncGenerator<FeedEntry[]> {
-	yield entries;
-}
 
 /** Reads, and where there is nothing looks again whenever the feed moves, until the time is over. What a filter hides moves the place on. */
 async function waitForEntries(
@@ -93,47 +92,25 @@ async function waitForEntries(
 	}
 }
 
-/** Pages up to and including a position: what is stored meanwhile belongs to the next request. */
-async function* pagesUpTo(
-	pool: Pool,
-	siteId: number,
-	from: Place,
-	last: number,
-	tagIds: ReadonlySet<number> | undefined,
-): AsyncGenerator<FeedEntry[]> {
-	let place = from;
-	while (place.position < last) {
-		const page = await readFeed(pool, siteId, place, { limit: STREAM_PAGE, tagIds });
-		yield page.position <= last ? page.entries : page.entries.filter((entry) => entry.position <= last);
-		if (page.position <= place.position) return;
-		place = { ...place, position: page.position };
-	}
+function toResponse(body: ReadableStream<Uint8Array> | string, form: 'ndjson' | 'csv'): Response {
+	return new Response(body, {
+		headers: { 'content-type': form === 'csv' ? `${CSV_TYPE}; charset=utf-8; header=present` : NDJSON_TYPE },
+	});
 }
 
-function lineStream(pool: Pool, siteId: number, pages: AsyncGenerator<FeedEntry[]>, isCsv: boolean): Response {
-	const encoder = new TextEncoder();
-	let isFirst = true;
-	const body = new ReadableStream<Uint8Array>(
+/** Made as the reader takes it: nothing piles up for one that is slow. */
+function toStream(chunks: AsyncGenerator<Uint8Array>): ReadableStream<Uint8Array> {
+	return new ReadableStream<Uint8Array>(
 		{
 			async pull(controller) {
-				let text = isFirst && isCsv ? FEED_CSV_HEADER : '';
-				isFirst = false;
-				let next = await pages.next();
-				while (!next.done && next.value.length === 0) next = await pages.next();
-				if (!next.done) {
-					const facts = await tagFacts(pool, siteId, tagIdsOf(next.value));
-					const lineOf = isCsv ? (entry: FeedEntry) => feedCsvLine(entry, facts) : createFeedLines(facts);
-					// Joining beats adding up: the text is flat and encodes in one go.
-					text += next.value.map(lineOf).join('');
-				}
-				if (text !== '') controller.enqueue(encoder.encode(text));
+				const next = await chunks.next();
 				if (next.done) controller.close();
+				else controller.enqueue(next.value);
 			},
 			async cancel() {
-				await pages.return(undefined);
+				await chunks.return(undefined);
 			},
 		},
 		{ highWaterMark: 1 },
 	);
-	return new Response(body, { headers: { 'content-type': isCsv ? `${CSV_TYPE}; charset=utf-8; header=present` : NDJSON_TYPE } });
 }
