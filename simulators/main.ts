@@ -6,15 +6,13 @@ import { readPorts } from './ports.ts';
 import { startReceiverSimulator } from './receiver/receiver-simulator.ts';
 import { startGatewayA } from './opcua/gateway-a.ts';
 import { createPlant } from './scenario/plant.ts';
+import { DEMO_SEED } from './scenario/seed.ts';
 import { startSmtpSimulator } from './smtp/smtp-simulator.ts';
 
 process.title = 'millrace-simulators';
 
-/** One seed for the plant everywhere, so that the numbers are the same after every start. */
-const SEED = 1_485;
-
 const ports = readPorts(process.env);
-const plant = createPlant(SEED);
+const plant = createPlant(DEMO_SEED);
 const mqtt = await startMqttSimulator({ port: ports.mqtt, plant });
 const gatewayB = await startGateway({ port: ports.modbus, plant, gateway: 'b' });
 const boilerHouse = await startGateway({ port: ports.rtu, plant, gateway: 'rtu' });

@@ -10,6 +10,7 @@ import { addSite } from '#lib/server/people/add-site.ts';
 import { createSource } from '#lib/server/source-setup/save-source.ts';
 import { editDraft } from '#lib/server/tag-map/edit-draft.ts';
 import { publishDraft } from '#lib/server/tag-map/publish-draft.ts';
+import { layHistory } from './lay-history.ts';
 import { demoLimits } from '#simulators/demo/demo-limits.ts';
 import { demoRows, demoSites, demoSources } from '#simulators/demo/demo-map.ts';
 
@@ -103,6 +104,7 @@ export async function layDemo(databaseUrl: string, config: Config): Promise<void
 			const limits = await saveLimits(pool, { siteId, limits: demoLimits(site.slug), note: 'The demo plant', actor, ip: null });
 			if (!limits.ok) throw new Error(`the demo's limits are in error: ${JSON.stringify(limits.faults.slice(0, 5))}`);
 		}
+		await layHistory(pool, Date.now());
 		await pool.query('UPDATE installation SET is_demo = true');
 	} finally {
 		await pool.end();
