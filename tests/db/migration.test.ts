@@ -43,4 +43,15 @@ describe('a freshly migrated database', () => {
 		expect((await insert()).rowCount).toBe(1);
 		expect((await insert()).rowCount).toBe(0);
 	});
+
+	it('shows readings through one view, with the UTC hour of each, to the application too', async () => {
+		await pool.query("SELECT ensure_partition('readings', '2026-12-02', '2026-12-03')");
+		await pool.query(
+			"INSERT INTO readings (tag_id, at, value, quality, received_at, is_hub_time, revision) VALUES (2, '2026-12-02T10:59:59.999Z', 1, 0, now(), false, 1)",
+		);
+		const found = await pool.query('SELECT at, value, hour FROM reading_history WHERE tag_id = 2');
+		expect(found.rows).toEqual([
+			{ at: new Date('2026-12-02T10:59:59.999Z'), value: 1, hour: new Date('2026-12-02T10:00:00.000Z') },
+		]);
+	});
 });
