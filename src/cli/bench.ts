@@ -16,31 +16,14 @@ import { freshState, judge } from '#lib/pipeline/evaluate/evaluate.ts';
 import { createPool, type Pool } from '#lib/server/db/pool.ts';
 import { migrateDatabase } from '#lib/server/db/migrate.ts';
 import { createBenchCluster } from './bench-cluster.ts';
+import { benchLine, type BenchLine } from './bench/line.ts';
+import { benchPages } from './bench/pages.ts';
 import { Refusal } from './bootstrap.js';
 
 const BATCH = 10_000;
 const ROUNDS = 5;
 const ROWS = 100_000;
 const TAGS = 500;
-
-interface Line {
-	bench: string;
-	ours: number;
-	reference: number;
-	ratio: number;
-	unit: string;
-	note: string;
-}
-
-function median(numbers: readonly number[]): number {
-	const sorted = [...numbers].sort((a, b) => a - b);
-	return sorted[sorted.length >> 1] ?? 0;
-}
-
-function line(bench: string, ours: readonly number[], reference: readonly number[], unit: string, note: string): Line {
-	const [a, b] = [median(ours), median(reference)];
-	return { bench, ours: Math.round(a), reference: Math.round(b), ratio: Math.round((a / b) * 1_000) / 1_000, unit, note };
-}
 
 /** Readings of a stretch of their own, so that no two rounds share one. */
 function readingsOf(siteId: number, tagIds: readonly number[], round: number, begin: number): StoredReading[] {
@@ -65,7 +48,7 @@ function readingsOf(siteId: number, tagIds: readonly number[], round: number, be
 }
 
 /** Ours: judged, written with latest values and the feed's journal. Reference: bare COPY of the same rows into the same table. A commit every 10,000 rows both. */
-async function ingest(pool: Pool, siteId: number, tagIds: readonly number[]): Promise<Line> {
+async function ingest(pool: Pool, siteId: number, tagIds: readonly number[]): Promise<BenchLine> {
 	const writer = createCopyWriter(pool, { now: Date.now });
 	const plan = { limits: [{ tag: '', kind: 'high' as const, level: 'alert' as const, value: 9, limitId: 1 }], staleAfterS: 30 };
 	const begin = Date.now() - 6 * 3_600_000;
@@ -128,7 +111,7 @@ async function ingest(pool: Pool, siteId: number, tagIds: readonly number[]): Pr
 		reference.push((ROWS / (performance.now() - started)) * 1_000);
 	}
 	await writer.close();
-	return line(
+	return benchLine(
 		'ingest',
 		ours,
 		reference,
@@ -138,7 +121,7 @@ async function ingest(pool: Pool, siteId: number, tagIds: readonly number[]): Pr
 }
 
 /** Ours: the feed as NDJSON lines. Reference: psql's \copy of the same columns as delivered. */
-async function feed(pool: Pool, url: string, siteId: number): Promise<Line> {
+async function feed(pool: Pool, url: string, siteId: number): Promise<BenchLine> {
 	const ours: number[] = [];
 	const reference: number[] = [];
 	let delivered = 0;
@@ -166,7 +149,7 @@ async function feed(pool: Pool, url: string, siteId: number): Promise<Line> {
 		reference.push((delivered / (performance.now() - started)) * 1_000);
 	}
 	rmSync(folder, { recursive: true, force: true });
-	return line(
+	return benchLine(
 		'feed',
 		ours,
 		reference,
@@ -176,26 +159,34 @@ async function feed(pool: Pool, url: string, siteId: number): Promise<Line> {
 }
 
 const asked = process.argv.slice(2);
-const KNOWN = ['ingest', 'feed'];
+const KNOWN = ['ingest', 'feed', 'pages'];
 for (const name of asked)
 	if (!KNOWN.includes(name)) throw new Refusal(`No benchmark is named "${name}". Known: ${KNOWN.join(', ')}.`);
 
-const cluster = await createBenchCluster();
-try {
-	await migrateDatabase(cluster.url, 'drizzle');
-	const pool = createPool(cluster.url, { name: 'millrace-bench', max: 6, statementTimeoutMs: 0 });
-	await ensurePartitionsAhead(pool, Date.now());
-	const site = await pool.query<{ id: number }>("INSERT INTO sites (slug, name) VALUES ('bench', 'Bench') RETURNING id");
-	const siteId = site.rows[0]?.id ?? 0;
-	const tags = await pool.query<{ id: number }>(
-		"INSERT INTO tags (site_id, name, unit, published_at) SELECT $1, 'TAG-' || n, 'mm/s', now() FROM generate_series(1, $2::int) AS n RETURNING id",
-		[siteId, TAGS],
-	);
-	const tagIds = tags.rows.map((row) => row.id);
-	const ingested = await ingest(pool, siteId, tagIds);
-	if (asked.length === 0 || asked.includes('ingest')) console.log(JSON.stringify(ingested));
-	if (asked.length === 0 || asked.includes('feed')) console.log(JSON.stringify(await feed(pool, cluster.url, siteId)));
-	await pool.end();
-} finally {
-	await cluster.remove();
+const wants = (name: string) => asked.length === 0 || asked.includes(name);
+const print = (line: BenchLine) => console.log(JSON.stringify(line));
+
+if (wants('ingest') || wants('feed')) await storeBenches();
+if (wants('pages')) (await benchPages()).forEach(print);
+
+async function storeBenches(): Promise<void> {
+	const cluster = await createBenchCluster();
+	try {
+		await migrateDatabase(cluster.url, 'drizzle');
+		const pool = createPool(cluster.url, { name: 'millrace-bench', max: 6, statementTimeoutMs: 0 });
+		await ensurePartitionsAhead(pool, Date.now());
+		const site = await pool.query<{ id: number }>("INSERT INTO sites (slug, name) VALUES ('bench', 'Bench') RETURNING id");
+		const siteId = site.rows[0]?.id ?? 0;
+		const tags = await pool.query<{ id: number }>(
+			"INSERT INTO tags (site_id, name, unit, published_at) SELECT $1, 'TAG-' || n, 'mm/s', now() FROM generate_series(1, $2::int) AS n RETURNING id",
+			[siteId, TAGS],
+		);
+		const tagIds = tags.rows.map((row) => row.id);
+		const ingested = await ingest(pool, siteId, tagIds);
+		if (wants('ingest')) print(ingested);
+		if (wants('feed')) print(await feed(pool, cluster.url, siteId));
+		await pool.end();
+	} finally {
+		await cluster.remove();
+	}
 }
