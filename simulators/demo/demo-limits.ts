@@ -1,32 +1,9 @@
 // Pure.
 import type { Limit } from '#lib/domain/limit.ts';
+import { zonesOf } from '#lib/domain/severity-zones.ts';
 import { machineOf, POINTS } from '../scenario/layout.ts';
-import type { Machine, Signal, SiteSlug } from '../scenario/parts.ts';
+import type { Signal, SiteSlug } from '../scenario/parts.ts';
 import { demoSignals } from './demo-map.ts';
-
-/** Boundaries B/C and C/D of the zones, in mm/s rms. */
-interface Zones {
-	bc: number;
-	cd: number;
-	from: string;
-}
-
-/**
- * Zone boundaries for a bearing. Motors, blowers and fans: ISO 20816-3 by group and foundation; pumps: ISO 10816-7 by
- * category and power. Null where the standards do not reach, as for a roll of 85 r/min.
- */
-export function zonesOf(machine: Machine, part: 'motor' | 'driven' | 'process'): Zones | null {
-	const { powerKw, isoGroup, foundation, pumpCategory } = machine;
-	if (part === 'driven' && pumpCategory !== null && powerKw !== null) {
-		const from = `ISO 10816-7, category ${pumpCategory}`;
-		if (pumpCategory === 'I') return powerKw > 200 ? { bc: 5, cd: 7.6, from } : { bc: 4, cd: 6.6, from };
-		return powerKw > 200 ? { bc: 6.1, cd: 9.5, from } : { bc: 5.1, cd: 8.5, from };
-	}
-	if (isoGroup === null || foundation === null) return null;
-	const from = `ISO 20816-3, group ${isoGroup}, ${foundation}`;
-	if (isoGroup === 1) return foundation === 'rigid' ? { bc: 4.5, cd: 7.1, from } : { bc: 7.1, cd: 11, from };
-	return foundation === 'rigid' ? { bc: 2.8, cd: 4.5, from } : { bc: 4.5, cd: 7.1, from };
-}
 
 /** A spike of one sample raises nothing: the next measurement has to hold too. */
 function raiseAfter(signal: Signal): number {
@@ -44,8 +21,10 @@ function limitsOf(signal: Signal): Limit[] {
 		case 'velocity': {
 			const machine = machineOf(signal.site, signal.machine ?? '');
 			const point = POINTS.find((one) => one.machine === signal.machine && one.name === signal.point);
-			const zones = machine && point ? zonesOf(machine, point.part) : null;
-			if (!zones) return [];
+			const found = machine && point && point.part !== 'process' ? zonesOf(machine, point.part) : null;
+			// The tables do not reach a roll of 85 r/min.
+			if (!found?.ok) return [];
+			const zones = found.value;
 			return [
 				{
 					...high,
@@ -53,7 +32,7 @@ function limitsOf(signal: Signal): Limit[] {
 					value: zones.bc,
 					deadband: 0.2,
 					origin: 'standard',
-					note: `zone B/C, ${zones.from}`,
+					note: `zone B/C, ${zones.table}`,
 					cause: 'Unbalance, misalignment or a loose foundation',
 					response: 'Compare with the other axes, then have the analyst look at it',
 					respond_within_s: 28_800,
@@ -64,7 +43,7 @@ function limitsOf(signal: Signal): Limit[] {
 					value: zones.cd,
 					deadband: 0.3,
 					origin: 'standard',
-					note: `zone C/D, ${zones.from}`,
+					note: `zone C/D, ${zones.table}`,
 					cause: 'Heavy unbalance, a damaged coupling or a bearing about to fail',
 					consequence: 'Damage to bearings and seals within hours',
 					response: 'Change over to the standby set and stop this one',

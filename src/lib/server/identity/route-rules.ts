@@ -70,6 +70,8 @@ export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
 	'/api/v1/sites/[site]/map/revisions/[n]/diff': 'api',
 	'/api/v1/sites/[site]/map/revisions/[n]/restore': 'api',
 	'/api/v1/sites/[site]/limits': 'api',
+	'/api/v1/sites/[site]/limits/propose': 'api',
+	'/api/v1/sites/[site]/limits/back-test': 'api',
 	'/api/v1/sites/[site]/test-values': 'api',
 };
 
