@@ -29,6 +29,7 @@ beforeAll(async () => {
 		{ tag: 'quiet', stale_after_s: 0.8 },
 		{ tag: 'tested' },
 		{ tag: 'unchanged' },
+		{ tag: 'buffered' },
 	);
 	ids = await site.publish('far tank', { tag: 'first', stale_after_s: 1.2 }, { tag: 'second', stale_after_s: 1.8 });
 	await site.limit(
@@ -38,6 +39,7 @@ beforeAll(async () => {
 		{ tag: 'second', kind: 'stale', level: 'alert' },
 		{ tag: 'tested', kind: 'high', level: 'alert', value: 7 },
 		{ tag: 'unchanged', kind: 'high', level: 'alert', value: 7 },
+		{ tag: 'buffered', kind: 'high', level: 'alert', value: 7, raise_after_s: 15 },
 	);
 	collector = await site.start('folder/main');
 	await running();
@@ -224,5 +226,28 @@ describe('a restart', () => {
 		expect(collector.pipeline.counts.duplicates - before).toBe(1);
 		expect(await site.values(id('unchanged'))).toEqual([9]);
 		expect(await site.alarms(id('unchanged'))).toMatchObject([{ raised_at: new Date(at), cleared_at: null }]);
+	});
+});
+
+describe('readings that a sensor buffered and that arrive behind live ones', () => {
+	it('one by one are one stretch: an excursion that its delay lets through is recorded closed, with its whole span', async () => {
+		const start = Date.now() - 120_000;
+		await device.send(sampleOf(id('buffered'), 3));
+		// 20 s above the limit with a delay of 15 s: judged one by one no reading would raise it.
+		for (const [second, value] of [
+			[0, 8],
+			[10, 8.1],
+			[20, 8.2],
+			[30, 8],
+			[40, 3],
+		] as const)
+			await device.send(sampleOf(id('buffered'), value, start + second * 1_000));
+		expect(await site.alarms(id('buffered'))).toEqual([]);
+		await collector.stop();
+		expect(await site.alarms(id('buffered'))).toMatchObject([
+			{ direction: 'up', level: 'alert', raised_at: new Date(start + 20_000), cleared_at: new Date(start + 40_000) },
+		]);
+		collector = await site.start('folder/main');
+		await running();
 	});
 });

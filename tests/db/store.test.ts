@@ -414,20 +414,40 @@ describe('alarms', () => {
 		expect(events.rows.map((row) => row.kind)).toEqual(['raised', 'escalated', 'stepped-down', 'cleared']);
 	});
 
-	it('found behind live data are recorded closed beside an open one', async () => {
+	it('found behind live data are recorded closed with their whole span, beside one that is open and was raised later', async () => {
 		const { siteId, tagIds } = await siteWithTags(pool, 1);
 		const tag = tagIds[0] ?? 0;
 		await writer.write(batchOf([], { alarmChanges: [change(tag, siteId, { at: now + 100, raisedAt: now + 100 })] }));
-		const late = { isLate: true, raisedAt: now, at: now };
+		const found = change(tag, siteId, { kind: 'found', isLate: true, levelNow: null, raisedAt: now, at: now + 5 });
+		await writer.write(batchOf([], { alarmChanges: [found] }));
+		await writer.write(batchOf([], { alarmChanges: [found] }));
+		const rows = await pool.query('SELECT is_late, raised_at, cleared_at FROM alarms WHERE tag_id = $1 ORDER BY raised_at', [
+			tag,
+		]);
+		expect(rows.rows).toEqual([
+			{ is_late: true, raised_at: new Date(now), cleared_at: new Date(now + 5) },
+			{ is_late: false, raised_at: new Date(now + 100), cleared_at: null },
+		]);
+	});
+
+	it('found behind live data that touch one on record are a part of it and no second', async () => {
+		const { siteId, tagIds } = await siteWithTags(pool, 1);
+		const tag = tagIds[0] ?? 0;
+		await writer.write(batchOf([], { alarmChanges: [change(tag, siteId, { at: now + 100, raisedAt: now + 100 })] }));
+		const found = { kind: 'found', isLate: true, levelNow: null } as const;
 		await writer.write(
 			batchOf([], {
-				alarmChanges: [change(tag, siteId, late), change(tag, siteId, { ...late, kind: 'cleared', levelNow: null, at: now + 5 })],
+				alarmChanges: [
+					change(tag, siteId, { ...found, raisedAt: now + 90, at: now + 110 }),
+					change(tag, siteId, { ...found, raisedAt: now + 150, at: now + 160 }),
+					change(tag, siteId, { ...found, direction: 'down', raisedAt: now + 150, at: now + 160 }),
+				],
 			}),
 		);
-		const found = await pool.query('SELECT is_late, cleared_at FROM alarms WHERE tag_id = $1 ORDER BY raised_at', [tag]);
-		expect(found.rows).toMatchObject([
-			{ is_late: true, cleared_at: expect.any(Date) },
-			{ is_late: false, cleared_at: null },
+		const rows = await pool.query('SELECT direction, is_late FROM alarms WHERE tag_id = $1 ORDER BY raised_at', [tag]);
+		expect(rows.rows).toEqual([
+			{ direction: 'up', is_late: false },
+			{ direction: 'down', is_late: true },
 		]);
 	});
 });

@@ -22,6 +22,8 @@ const MOST_WAITING = 200_000;
 const LATEST_MS = 1_000;
 const CONFIRM_MS = 5_000;
 const RETRY_MS = 500;
+/** Late readings of a tag are one stretch until none has come for this long. */
+const LATE_QUIET_MS = 10_000;
 
 export interface PipelineCounts {
 	/** Readings committed since the start. */
@@ -70,6 +72,7 @@ export class Pipeline {
 	#pending: Pending;
 	#latest = new Set<TagRuntime>();
 	#confirmed = new Set<TagRuntime>();
+	#late = new Set<TagRuntime>();
 	#latestAt = 0;
 	#confirmedAt = 0;
 	#timer: NodeJS.Timeout | undefined;
@@ -94,6 +97,7 @@ export class Pipeline {
 			touchJudging: (tag) => judging.add(tag),
 			touchLatest: (tag) => this.#latest.add(tag),
 			touchConfirmed: (tag) => this.#confirmed.add(tag),
+			touchLate: (tag) => this.#late.add(tag),
 		};
 	}
 
@@ -129,6 +133,17 @@ export class Pipeline {
 		this.tags.delete(tagId);
 		this.#latest.delete(tag);
 		this.#confirmed.delete(tag);
+		if (this.#late.delete(tag)) tag.judgeLate(this.clock(), this.#pending, true);
+	}
+
+	/** Judges the late stretches that are over; all of them when this process stops. */
+	#judgeLate(isStopping: boolean): void {
+		const clock = this.clock();
+		for (const tag of this.#late) {
+			if (!isStopping && !tag.isLateOver(clock.mono, LATE_QUIET_MS)) continue;
+			this.#late.delete(tag);
+			tag.judgeLate(clock, this.#pending, true);
+		}
 	}
 
 	/**
@@ -182,11 +197,12 @@ export class Pipeline {
 
 	async #flush(): Promise<void> {
 		if (this.#writing) return;
+		if (this.#late.size > 0) this.#judgeLate(this.#isStopping);
 		const pending = this.#pending;
 		const isLatestDue = performance.now() - this.#latestAt >= LATEST_MS;
 		const isConfirmDue = performance.now() - this.#confirmedAt >= CONFIRM_MS;
 		if (!hasWork(pending) && !(isLatestDue && this.#latest.size > 0)) {
-			if (this.#latest.size > 0) this.#schedule(pending);
+			if (this.#latest.size + this.#late.size > 0) this.#schedule(pending);
 			return;
 		}
 		this.#pending = this.#fresh();
@@ -219,7 +235,7 @@ export class Pipeline {
 		this.#writingCount = 0;
 		this.counts.waiting = this.#pending.readings.length;
 		const next = this.#pending;
-		if (hasWork(next) || this.#latest.size > 0) this.#schedule(next);
+		if (hasWork(next) || this.#latest.size + this.#late.size > 0) this.#schedule(next);
 	}
 
 	/** Writes until it is written: what was taken is not let go because the database is away. */
@@ -281,10 +297,12 @@ export class Pipeline {
 	}
 
 	#isClosing = false;
+	#isStopping = false;
 
 	/** Writes what is left; with the database away it gives up after `graceMs` and counts what is lost. */
 	async close(graceMs = 5_000): Promise<void> {
 		const limit = setTimeout(() => (this.#isClosing = true), graceMs);
+		this.#isStopping = true;
 		clearTimeout(this.#timer);
 		this.#latestAt = 0;
 		this.#confirmedAt = 0;

@@ -3,7 +3,7 @@ import { severityOf, STATUS_CODES } from '#lib/domain/quality.ts';
 import type { RawScalar, Reading, Verdict } from '#lib/domain/reading.ts';
 import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
 import { confirm, freshState, goStale, judge, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
-import { judgeLate } from '#lib/pipeline/evaluate/judge-late.ts';
+import { freshStretch, judgeLate, MOST_LATE, type LateStretch } from '#lib/pipeline/evaluate/judge-late.ts';
 import { shouldStore, type LastStored } from '#lib/pipeline/normalize/deadband.ts';
 import { normalize, type NormalizeContext } from '#lib/pipeline/normalize/normalize.ts';
 import { rawToStore } from '#lib/pipeline/normalize/raw-to-store.ts';
@@ -23,6 +23,8 @@ export interface Sink {
 	touchJudging(tag: TagRuntime): void;
 	touchLatest(tag: TagRuntime): void;
 	touchConfirmed(tag: TagRuntime): void;
+	/** The tag has late readings that wait to be judged as one stretch. */
+	touchLate(tag: TagRuntime): void;
 }
 
 export interface StageClock {
@@ -61,6 +63,8 @@ export class TagRuntime {
 	/** The newest reading; kept while stale, since the source may say that it still stands. */
 	#last: Pick<Reading, 'at' | 'value' | 'quality' | 'receivedAt'> | null = null;
 	#heldBack: TagAlarmChange[] = [];
+	#late: LateStretch | null = null;
+	#lateMono = 0;
 
 	constructor(plan: TagPlan, memory: TagMemory, mono: number) {
 		this.plan = plan;
@@ -123,8 +127,11 @@ export class TagRuntime {
 			? { verdict: 'unknown' as Verdict, state: this.judging, changes: [], isLimitEdge: false, isLate: false }
 			: judge(reading, plan, this.judging, { now: clock.now });
 		if (judged.isLate && plan.limits.length > 0) {
-			for (const change of judgeLate([reading], plan, clock.now))
-				sink.alarmChanges.push({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false });
+			this.#late ??= freshStretch();
+			this.#late.readings.push(reading);
+			this.#lateMono = clock.mono;
+			sink.touchLate(this);
+			if (this.#late.readings.length >= MOST_LATE) this.judgeLate(clock, sink, false);
 		}
 		if (judged.state !== this.judging) {
 			this.judging = judged.state;
@@ -159,6 +166,20 @@ export class TagRuntime {
 			resets,
 		};
 		sink.touchLatest(this);
+	}
+
+	/** True when nothing late has come for `quietMs`: the stretch is over. */
+	isLateOver(mono: number, quietMs: number): boolean {
+		return mono - this.#lateMono >= quietMs;
+	}
+
+	/** Judges the late readings that wait, as one stretch; alarms are recorded as found afterwards. */
+	judgeLate(clock: StageClock, sink: Pick<Sink, 'alarmChanges'>, isEnd: boolean): void {
+		if (!this.#late) return;
+		const { plan } = this;
+		const { stretch, found } = judgeLate(this.#late, plan, clock.now, isEnd);
+		this.#late = isEnd ? null : stretch;
+		sink.alarmChanges.push(...found.map((change) => ({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false })));
 	}
 
 	/** A stale tag's source confirms its last value: the value stands again, and receivers that were told of the silence are told so. */

@@ -4,7 +4,7 @@ import type { Reading } from '#lib/domain/reading.ts';
 import type { PlannedLimit } from '#lib/domain/tag-map/tag-plan.ts';
 import { alarmStateOf } from './alarm-lifecycle.ts';
 import { confirm, freshState, goStale, judge, type AlarmChange, type JudgingState } from './evaluate.ts';
-import { judgeLate } from './judge-late.ts';
+import { freshStretch, judgeLate } from './judge-late.ts';
 import { ratePerMinute } from './rate.ts';
 
 const T0 = Date.UTC(2026, 11, 1, 12, 0, 0);
@@ -250,16 +250,86 @@ describe('order and clocks', () => {
 		expect(next).toMatchObject({ isLate: false, changes: [{ kind: 'raised' }] });
 	});
 
-	it('what arrives behind live data is judged apart and recorded as found afterwards', () => {
-		const changes = judgeLate(
-			[reading(3, 4), reading(1, 5), reading(2, 5)],
-			{ limits: [limit()], staleAfterS: 30 },
-			T0 + 100_000,
+	const late = (limits: PlannedLimit[], samples: [number, number][], isEnd = true, stretch = freshStretch()) =>
+		judgeLate(
+			{ ...stretch, readings: samples.map(([second, value]) => reading(second, value)) },
+			{ limits, staleAfterS: 30 },
+			T0 + 1_000_000,
+			isEnd,
 		);
-		expect(changes.map((one) => `${one.kind}@${(one.at - T0) / 1_000} ${one.isLate}`)).toEqual([
-			'raised@1 true',
-			'cleared@3 true',
+	const said = (changes: readonly AlarmChange[]) =>
+		changes.map((one) => `${one.kind} ${one.level} ${(one.raisedAt - T0) / 1_000}–${(one.at - T0) / 1_000} ${one.isLate}`);
+
+	it('what arrives behind live data is judged as one stretch in the order of time, and its excursion is found whole', () => {
+		expect(
+			said(
+				late(
+					[limit()],
+					[
+						[3, 4],
+						[1, 5],
+						[2, 5],
+					],
+				).found,
+			),
+		).toEqual(['found alert 1–3 true']);
+	});
+
+	it('a delay runs over the readings of a late stretch: 20 s above the limit raise a limit that asks for 15 s', () => {
+		const delayed = [limit({ raise_after_s: 15 })];
+		expect(
+			said(
+				late(delayed, [
+					[0, 5],
+					[10, 5],
+					[20, 5],
+					[30, 4],
+				]).found,
+			),
+		).toEqual(['found alert 20–30 true']);
+		expect(
+			late(delayed, [
+				[0, 5],
+				[10, 5],
+				[14, 4],
+			]).found,
+		).toEqual([]);
+	});
+
+	it('an excursion that stands at the end of a late stretch ends with its last reading, at the highest level reached', () => {
+		const two = [limit(), limit({ level: 'danger', value: 7.1, limitId: 2 })];
+		const { found } = late(two, [
+			[0, 5],
+			[10, 8],
+			[20, 6],
 		]);
+		expect(said(found)).toEqual(['found danger 0–20 true']);
+		expect(found[0]?.limitId).toBe(2);
+	});
+
+	it('a stretch judged in two parts finds one excursion', () => {
+		const first = late(
+			[limit()],
+			[
+				[0, 5],
+				[10, 5],
+			],
+			false,
+		);
+		expect(first.found).toEqual([]);
+		expect(
+			said(
+				late(
+					[limit()],
+					[
+						[20, 5],
+						[30, 4],
+					],
+					true,
+					first.stretch,
+				).found,
+			),
+		).toEqual(['found alert 0–30 true']);
 	});
 });
 

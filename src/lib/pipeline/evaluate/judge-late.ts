@@ -1,30 +1,61 @@
 // Pure.
+import type { AlarmDirection } from '#lib/domain/limit.ts';
 import type { Reading } from '#lib/domain/reading.ts';
 import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
-import { freshState, judge, type AlarmChange } from './evaluate.ts';
+import { freshState, judge, type AlarmChange, type JudgingState } from './evaluate.ts';
+
+/** Readings of one tag that arrived behind live data and belong together, and what judging them has come to so far. */
+export interface LateStretch {
+	/** Not judged yet, in the order of arrival. */
+	readings: Reading[];
+	state: JudgingState;
+	/** Excursions that began and have not ended yet, by direction. */
+	open: Partial<Record<AlarmDirection, AlarmChange>>;
+	/** Time of the newest usable reading judged. */
+	lastAt: number | null;
+}
+
+/** Most readings of a stretch that wait to be judged: then those that are there are judged, and the stretch goes on. */
+export const MOST_LATE = 500;
+
+export function freshStretch(): LateStretch {
+	return { readings: [], state: freshState(), open: {}, lastAt: null };
+}
 
 /**
- * Judges a stretch of readings that arrived behind live data, apart from the live state, in the order of their time.
- * Alarms that began and ended within the stretch are recorded as found afterwards; one still open at its end is closed with the last reading,
- * since live judging has gone on from there by itself.
+ * Judges what waits of a stretch, apart from the live state, in the order of time. Answers whole excursions as `found`: `raisedAt` to `at`,
+ * with the highest level reached. At the stretch's end one that still stands ends with the last reading, since live judging has gone on from there.
  */
 export function judgeLate(
-	readings: readonly Reading[],
+	stretch: LateStretch,
 	plan: Pick<TagPlan, 'limits' | 'staleAfterS'>,
 	now: number,
-): AlarmChange[] {
-	const ordered = [...readings].sort((a, b) => a.at - b.at);
-	let state = freshState();
-	const changes: AlarmChange[] = [];
-	for (const reading of ordered) {
+	isEnd: boolean,
+): { stretch: LateStretch; found: AlarmChange[] } {
+	const open = { ...stretch.open };
+	const found: AlarmChange[] = [];
+	let { state, lastAt } = stretch;
+	const end = (direction: AlarmDirection, at: number): void => {
+		const begun = open[direction];
+		if (!begun) return;
+		delete open[direction];
+		found.push({ ...begun, kind: 'found', levelNow: null, at });
+	};
+	for (const reading of [...stretch.readings].sort((a, b) => a.at - b.at)) {
 		const judged = judge(reading, plan, state, { now });
 		state = judged.state;
-		changes.push(...judged.changes);
+		if (!judged.isLate && reading.value !== null) lastAt = reading.at;
+		for (const change of judged.changes) {
+			if (change.kind === 'cleared') end(change.direction, change.at);
+			else if (change.kind === 'raised') open[change.direction] = { ...change, isLate: true };
+			else {
+				const begun = open[change.direction];
+				// Its highest level, with the limit that gave it.
+				if (begun && change.kind === 'escalated')
+					open[change.direction] = { ...begun, level: change.level, limitId: change.limitId, limitKind: change.limitKind };
+			}
+		}
 	}
-	const last = ordered.at(-1);
-	for (const [direction, alarm] of Object.entries(state.open)) {
-		const raised = changes.findLast((one) => one.direction === direction && one.raisedAt === alarm?.raisedAt);
-		if (raised && last) changes.push({ ...raised, kind: 'cleared', levelNow: null, at: last.at, value: last.value });
-	}
-	return changes.map((one) => ({ ...one, isLate: true }));
+	if (isEnd) for (const direction of Object.keys(open) as AlarmDirection[]) end(direction, lastAt ?? now);
+	return { stretch: { readings: [], state, open, lastAt }, found };
 }

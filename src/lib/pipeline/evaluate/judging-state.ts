@@ -43,7 +43,8 @@ export interface JudgingState {
 
 /** A change of an alarm that travels with the readings that made it. */
 export interface AlarmChange {
-	kind: 'raised' | 'escalated' | 'stepped-down' | 'cleared';
+	/** `found`: a whole excursion known only afterwards, from `raisedAt` to `at`. */
+	kind: 'raised' | 'escalated' | 'stepped-down' | 'cleared' | 'found';
 	direction: AlarmDirection;
 	limitKind: LimitKind;
 	/** Highest level reached so far. */

@@ -13,6 +13,9 @@ export async function applyAlarmChanges(client: Client, changes: readonly TagAla
 			case 'raised':
 				await raise(client, change);
 				break;
+			case 'found':
+				await recordFound(client, change);
+				break;
 			case 'escalated':
 			case 'stepped-down': {
 				const moved = await client.query<{ id: number }>(
@@ -39,8 +42,8 @@ export async function applyAlarmChanges(client: Client, changes: readonly TagAla
 			case 'cleared': {
 				const cleared = await client.query<{ id: number }>(
 					`UPDATE alarms SET cleared_at = greatest($5::timestamptz, raised_at), level_now = NULL
-					 WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND raised_at <= $4 AND cleared_at IS NULL AND is_late = $6 RETURNING id`,
-					[change.tagId, change.direction, change.isTest, iso(change.raisedAt), iso(change.at), change.isLate],
+					 WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND raised_at <= $4 AND cleared_at IS NULL RETURNING id`,
+					[change.tagId, change.direction, change.isTest, iso(change.raisedAt), iso(change.at)],
 				);
 				await record(client, cleared.rows[0]?.id, change);
 				break;
@@ -50,17 +53,31 @@ export async function applyAlarmChanges(client: Client, changes: readonly TagAla
 }
 
 async function raise(client: Client, change: TagAlarmChange): Promise<void> {
-	const open = change.isLate
-		? { rowCount: 0 }
-		: await client.query('SELECT 1 FROM alarms WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND cleared_at IS NULL', [
-				change.tagId,
-				change.direction,
-				change.isTest,
-			]);
+	const open = await client.query(
+		'SELECT 1 FROM alarms WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND cleared_at IS NULL',
+		[change.tagId, change.direction, change.isTest],
+	);
 	if ((open.rowCount ?? 0) > 0) return;
+	await record(client, await insert(client, change, null), change);
+}
+
+/** An excursion known only afterwards is recorded closed. Where it touches one that is on record, it is a part of that one and no second. */
+async function recordFound(client: Client, change: TagAlarmChange): Promise<void> {
+	const same = await client.query(
+		`SELECT 1 FROM alarms WHERE tag_id = $1 AND direction = $2 AND is_test = $3
+			AND raised_at <= $5::timestamptz AND coalesce(cleared_at, 'infinity') >= $4::timestamptz`,
+		[change.tagId, change.direction, change.isTest, iso(change.raisedAt), iso(change.at)],
+	);
+	if ((same.rowCount ?? 0) > 0) return;
+	const id = await insert(client, change, change.at);
+	await record(client, id, { ...change, kind: 'raised', at: change.raisedAt });
+	await record(client, id, { ...change, kind: 'cleared', value: null });
+}
+
+async function insert(client: Client, change: TagAlarmChange, clearedAt: number | null): Promise<number | undefined> {
 	const made = await client.query<{ id: number }>(
 		`INSERT INTO alarms (site_id, tag_id, direction, kind, level, level_now, raised_value, is_uncertain, is_late, is_test, raised_at, cleared_at, limit_id)
-		 SELECT $1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11::timestamptz, CASE WHEN $9 THEN $11::timestamptz END, (SELECT id FROM limits WHERE id = $12)
+		 SELECT $1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11::timestamptz, $12::timestamptz, (SELECT id FROM limits WHERE id = $13)
 		 ON CONFLICT DO NOTHING RETURNING id`,
 		[
 			change.siteId,
@@ -68,16 +85,17 @@ async function raise(client: Client, change: TagAlarmChange): Promise<void> {
 			change.direction,
 			change.limitKind,
 			change.level,
-			change.isLate ? null : change.levelNow,
+			clearedAt === null ? change.levelNow : null,
 			change.value,
 			change.isUncertain,
 			change.isLate,
 			change.isTest,
 			iso(change.raisedAt),
+			clearedAt === null ? null : iso(clearedAt),
 			change.limitId || null,
 		],
 	);
-	await record(client, made.rows[0]?.id, change);
+	return made.rows[0]?.id;
 }
 
 async function record(client: Client, alarmId: number | undefined, change: TagAlarmChange): Promise<void> {
