@@ -5,5 +5,14 @@ export default defineConfig({
 	schema: './src/lib/server/db/schema',
 	out: './drizzle',
 	// Partitioned tables are written by hand as custom migrations; drizzle-kit has no words for them.
-	tablesFilter: ['!readings', '!readings_*', '!reading_*', '!rollups_*', '!feed_journal', '!feed_journal_*', '!test_readings'],
+	tablesFilter: [
+		'!readings',
+		'!readings_*',
+		'!reading_*',
+		'!late_readings',
+		'!rollups_*',
+		'!feed_journal',
+		'!feed_journal_*',
+		'!test_readings',
+	],
 });

@@ -1,6 +1,8 @@
 // Edge: collector. Which sources run here: leases, published plans, test values, requests of the pages. Wires things; decides nothing.
 import { createPipelineJobs, type Jobs } from './jobs.ts';
+import { createPacking, type Packing } from './packing.ts';
 import type { Pipeline } from '#lib/pipeline/pipeline.ts';
+import { longestRawDays } from '#lib/pipeline/store/retention.ts';
 import type { Source } from '#lib/pipeline/sources/source.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
@@ -31,6 +33,7 @@ export class Supervisor {
 	readonly #options: SupervisorOptions;
 	readonly #tests: TestValues;
 	readonly #jobs: Jobs;
+	readonly #packing: Packing;
 	#held = new Set<string>();
 	#fingerprint = '';
 	#timers: NodeJS.Timeout[] = [];
@@ -43,9 +46,15 @@ export class Supervisor {
 		this.#options = options;
 		this.#tests = new TestValues(options.pool, options.pipeline);
 		this.#jobs = createPipelineJobs(options.pool, options.now);
+		this.#packing = createPacking(options.pool, options.now);
+	}
+
+	async #readRawDays(): Promise<void> {
+		this.#options.pipeline.rawDays = await longestRawDays(this.#options.pool);
 	}
 
 	async start(): Promise<void> {
+		await this.#readRawDays().catch(() => undefined);
 		await this.#lease();
 		await this.look();
 		const every = (ms: number, work: () => Promise<void>) => {
@@ -69,6 +78,8 @@ export class Supervisor {
 		});
 		every(LOOK_MS, () => this.#tests.look());
 		every(60_000, () => this.#jobs.run());
+		every(60_000, () => this.#packing.run());
+		every(60_000, () => this.#readRawDays());
 		void this.#jobs.run().catch((error: Error) => log.warn({ error: error.message }, 'maintenance failed and is tried again'));
 	}
 
@@ -172,6 +183,7 @@ export class Supervisor {
 	/** Sources stop, the pipeline drains, leases go back. The caller ends the pool. */
 	async stop(): Promise<void> {
 		this.#isStopped = true;
+		this.#packing.stop();
 		for (const timer of this.#timers) clearInterval(timer);
 		const stopped = Promise.all([...this.runs.values()].map((run) => run.stop()));
 		// A source waits until what it took is stored; with the database away only the pipeline's close ends that wait.

@@ -1,5 +1,6 @@
 // Edge: pipeline. Lists the stages in order: decode → normalize → judge → deadband → write; one bounded queue; sheds load visibly, never silently.
 import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
+import { RETENTION } from '#lib/domain/retention.ts';
 import { log } from '#lib/server/log.ts';
 import type { EmitAnswer, Sample } from '#lib/pipeline/sources/source.ts';
 import type { CopyWriter } from '#lib/pipeline/store/copy-writer.ts';
@@ -67,6 +68,8 @@ function isRefusal(error: unknown): boolean {
 export class Pipeline {
 	readonly counts: PipelineCounts = { stored: 0, duplicates: 0, deadLetters: 0, dropped: 0, waiting: 0, taken: 0 };
 	readonly tags = new Map<number, TagRuntime>();
+	/** Days that raw readings are kept, the longest of all tags; a source's time before that is not to be trusted. */
+	rawDays = RETENTION.rawDays;
 	readonly #writer: CopyWriter;
 	readonly #now: () => number;
 	#pending: Pending;
@@ -108,7 +111,7 @@ export class Pipeline {
 
 	clock(): StageClock {
 		const now = this.#now();
-		return { now, mono: performance.now(), rawEdge: rawEdgeOf(now) };
+		return { now, mono: performance.now(), rawEdge: rawEdgeOf(now, this.rawDays) };
 	}
 
 	/** Takes a tag up, or its new plan; a tag that was running keeps what it remembers. */

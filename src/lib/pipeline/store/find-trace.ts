@@ -30,6 +30,17 @@ export interface TraceFacts {
 	readers: { name: string; position: number; readAt: number }[];
 }
 
+const COLUMNS = 'at, received_at, source_at, is_hub_time, value, quality, reason, raw, revision';
+/** The newest of each kind of keeping, and of those the newest; of the blocks only the last that has a reading so early is opened. */
+const NEWEST_BEFORE = `
+SELECT ${COLUMNS}, NULL::timestamptz AS updated_at, NULL::text AS wire, NULL::text AS verdict FROM (
+	(SELECT ${COLUMNS} FROM recent_readings WHERE tag_id = $1 AND at <= $2 ORDER BY at DESC LIMIT 1)
+	UNION ALL (SELECT ${COLUMNS} FROM late_readings WHERE tag_id = $1 AND at <= $2 ORDER BY at DESC LIMIT 1)
+	UNION ALL (SELECT ${COLUMNS} FROM unpacked_readings WHERE tag_id = $1 AND at <= $2 AND hour = (
+		SELECT hour FROM reading_blocks WHERE tag_id = $1 AND hour <= $2 AND hour + first_ms * interval '1 millisecond' <= $2 AND hour < (SELECT packed_until FROM packing_state)
+		ORDER BY hour DESC LIMIT 1) ORDER BY at DESC LIMIT 1)) newest
+ORDER BY at DESC LIMIT 1`;
+
 /** The facts of a tag's latest value, or of the stored one at or just before `at`; null where there is none. */
 export async function findTrace(pool: Pool, tagId: number, at: number | null): Promise<TraceFacts | null> {
 	const tag = await pool.query<{
@@ -63,8 +74,7 @@ export async function findTrace(pool: Pool, tagId: number, at: number | null): P
 	}>(
 		at === null
 			? 'SELECT at, received_at, updated_at, source_at, is_hub_time, value, quality, reason, raw, wire, verdict, revision FROM latest WHERE tag_id = $1'
-			: `SELECT at, received_at, NULL::timestamptz AS updated_at, source_at, is_hub_time, value, quality, reason, raw, NULL::text AS wire, NULL::text AS verdict, revision
-				FROM readings WHERE tag_id = $1 AND at <= $2 ORDER BY at DESC LIMIT 1`,
+			: NEWEST_BEFORE,
 		at === null ? [tagId] : [tagId, new Date(at).toISOString()],
 	);
 	const value = found.rows[0];

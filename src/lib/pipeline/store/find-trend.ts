@@ -48,8 +48,8 @@ export async function findTrend(
 		`WITH spans AS (
 			SELECT floor(extract(epoch FROM r.at) / $4)::bigint AS bucket, r.value, r.quality, extract(epoch FROM r.at) AS s,
 				extract(epoch FROM lead(r.at) OVER (ORDER BY r.at)) AS next_s
-			FROM readings r JOIN tags t ON t.id = r.tag_id
-			WHERE r.tag_id = $1 AND r.at >= $2 AND r.at < $3 AND r.revision >= t.unit_revision)
+			FROM reading_history r JOIN tags t ON t.id = r.tag_id
+			WHERE r.tag_id = $1 AND r.at >= $2 AND r.at < $3 AND r.hour >= date_trunc('hour', $2::timestamptz, 'UTC') AND r.hour < $3 AND r.revision >= t.unit_revision)
 		 SELECT (bucket * $4 * 1000)::float8 AS at, min(value) AS min, max(value) AS max, count(value)::int AS n,
 			CASE WHEN count(value) = 0 THEN NULL
 				ELSE coalesce(sum(value * w) / nullif(sum(w) FILTER (WHERE value IS NOT NULL), 0), avg(value)) END AS mean,

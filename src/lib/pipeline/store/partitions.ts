@@ -1,6 +1,8 @@
 // Edge: store. May touch: pool; partition functions of the database.
 import type { Client, Pool } from '#lib/server/db/pool.ts';
+import { RETENTION } from '#lib/domain/retention.ts';
 import { inTransaction } from '#lib/server/db/transaction.ts';
+import { longestRawDays, readRetention } from './retention.ts';
 
 const DAY_MS = 86_400_000;
 /** Days kept ready ahead of now; maintenance runs hourly, so a week of it may fail before anything is missed. */
@@ -47,27 +49,26 @@ export async function ensurePartitionsAhead(client: Queryable, now: number): Pro
 	for (const at of [now - 31 * DAY_MS, now, now + 31 * DAY_MS]) await ensureRollupMonth(client, at);
 }
 
-export interface Retention {
-	rawDays: number;
-	minuteDays: number;
-	hourDays: number;
-	journalDays: number;
-}
-export const RETENTION: Retention = { rawDays: 400, minuteDays: 730, hourDays: 3_650, journalDays: 14 };
-
-/** Oldest time that is kept as raw readings. */
-export function rawEdgeOf(now: number, retention: Retention = RETENTION): number {
-	return now - retention.rawDays * DAY_MS;
+/** Oldest time of which raw readings are kept for `rawDays`. */
+export function rawEdgeOf(now: number, rawDays: number = RETENTION.rawDays): number {
+	return now - rawDays * DAY_MS;
 }
 
 /**
  * Drops partitions past their retention, by the wall clock and never by the newest row, so that one reading from the future empties nothing.
  * Answers how many were dropped.
  */
-export async function dropExpired(pool: Pool, now: number, retention: Retention = RETENTION): Promise<number> {
-	let dropped = 0;
+export async function dropExpired(pool: Pool, now: number): Promise<number> {
+	const retention = await readRetention(pool);
+	// Rows of several rules share a day; they are packed long before, and only then kept apart.
+	const rowDays = await longestRawDays(pool);
+	const blocks = await pool.query<{ n: number }>('SELECT drop_expired_blocks($1, $2) AS n', [
+		new Date(now).toISOString(),
+		retention.rawDays,
+	]);
+	let dropped = blocks.rows[0]?.n ?? 0;
 	for (const [parent, days] of [
-		['readings', retention.rawDays],
+		['readings', rowDays],
 		['rollups_minute', retention.minuteDays],
 		['rollups_hour', retention.hourDays],
 		['feed_journal', retention.journalDays],

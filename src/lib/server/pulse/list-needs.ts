@@ -74,8 +74,11 @@ WHERE s.site_id = $1 AND s.deleted_at IS NULL AND s.enabled AND h.state IN ('los
 
 const BATTERIES = `
 SELECT t.name AS tag, t.row->>'machine' AS machine, t.row->>'point' AS point, l.value, l.at,
-	(SELECT (l.value - r.value) / nullif(extract(epoch FROM l.at - r.at) / 86400, 0) FROM readings r
-	 WHERE r.tag_id = t.id AND r.at > now() - interval '30 days' AND r.at < l.at - interval '1 day' AND r.value IS NOT NULL ORDER BY r.at LIMIT 1) AS per_day
+	(SELECT (l.value - r.value) / nullif(extract(epoch FROM l.at - r.at) / 86400, 0) FROM reading_history r
+	 WHERE r.tag_id = t.id AND r.at > now() - interval '30 days' AND r.at < l.at - interval '1 day' AND r.value IS NOT NULL
+		AND r.hour >= date_trunc('hour', now() - interval '30 days', 'UTC')
+		-- Of what is packed the first block is enough.
+		AND r.hour <= coalesce((SELECT min(b.hour) FROM reading_blocks b WHERE b.tag_id = t.id AND b.hour >= now() - interval '30 days'), 'infinity') ORDER BY r.at LIMIT 1) AS per_day
 FROM tags t JOIN latest l ON l.tag_id = t.id
 WHERE t.site_id = $1 AND t.quantity = 'battery' AND t.unit = '%' AND t.retired_at IS NULL AND t.published_at IS NOT NULL AND l.value < 20
 ORDER BY l.value LIMIT 20`;
