@@ -11,6 +11,7 @@ export default defineConfig({
 		'!reading_*',
 		'!late_readings',
 		'!rollups_*',
+		'!rollup_progress',
 		'!feed_journal',
 		'!feed_journal_*',
 		'!test_readings',

@@ -18,6 +18,7 @@ import { migrateDatabase } from '#lib/server/db/migrate.ts';
 import { createBenchCluster } from './bench-cluster.ts';
 import { benchLine, type BenchLine } from './bench/line.ts';
 import { benchPages } from './bench/pages.ts';
+import { benchTrendGrowth } from './bench/trend-growth.ts';
 import { Refusal } from './bootstrap.js';
 
 const BATCH = 10_000;
@@ -159,14 +160,14 @@ async function feed(pool: Pool, url: string, siteId: number): Promise<BenchLine>
 }
 
 const asked = process.argv.slice(2);
-const KNOWN = ['ingest', 'feed', 'pages'];
+const KNOWN = ['ingest', 'feed', 'trend-growth', 'pages'];
 for (const name of asked)
 	if (!KNOWN.includes(name)) throw new Refusal(`No benchmark is named "${name}". Known: ${KNOWN.join(', ')}.`);
 
 const wants = (name: string) => asked.length === 0 || asked.includes(name);
 const print = (line: BenchLine) => console.log(JSON.stringify(line));
 
-if (wants('ingest') || wants('feed')) await storeBenches();
+if (wants('ingest') || wants('feed') || wants('trend-growth')) await storeBenches();
 if (wants('pages')) (await benchPages()).forEach(print);
 
 async function storeBenches(): Promise<void> {
@@ -182,8 +183,9 @@ async function storeBenches(): Promise<void> {
 			[siteId, TAGS],
 		);
 		const tagIds = tags.rows.map((row) => row.id);
-		const ingested = await ingest(pool, siteId, tagIds);
-		if (wants('ingest')) print(ingested);
+		if (wants('trend-growth')) print(await benchTrendGrowth(pool, tagIds[0] ?? 0));
+		const ingested = wants('ingest') || wants('feed') ? await ingest(pool, siteId, tagIds) : null;
+		if (wants('ingest') && ingested) print(ingested);
 		if (wants('feed')) print(await feed(pool, cluster.url, siteId));
 		await pool.end();
 	} finally {

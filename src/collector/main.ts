@@ -13,6 +13,7 @@ import { log } from '#lib/server/log.ts';
 import { listenFor } from './bell.ts';
 import { syncTrusted } from './certificate-store.ts';
 import { registerCollector, type Owner } from './lease.ts';
+import { startRollUps } from './roll-ups.ts';
 import { Supervisor } from './supervisor.ts';
 
 process.title = 'millrace-collector';
@@ -67,6 +68,7 @@ async function main(): Promise<void> {
 	);
 	// Signals are heeded before leases are taken, so that a stop in the middle of the start gives them back too.
 	const started = supervisor.start();
+	const stopRollUps = startRollUps(pool, now);
 	let isStopping = false;
 	const stop = async () => {
 		if (isStopping) process.exit(1);
@@ -75,6 +77,7 @@ async function main(): Promise<void> {
 		await started.catch(() => undefined);
 		await supervisor.stop();
 		await writer.close();
+		await stopRollUps();
 		await pool.end();
 		process.exit(0);
 	};

@@ -464,7 +464,7 @@ describe('a trend', () => {
 		expect(widthS).toBe(60);
 		expect(buckets).toEqual([
 			{ at: t0, min: 2, max: 6, mean: 5, n: 2, worst: 0 },
-			{ at: t0 + 180_000, min: 1, max: 1, mean: 1, n: 1, worst: 0x808c0000 },
+			{ at: t0 + 180_000, min: 1, max: 1, mean: 1, n: 2, worst: 0x808c0000 },
 		]);
 	});
 });

@@ -1,18 +1,29 @@
-// Edge: store. May touch: pool; readings, to read.
+// Edge: store. May touch: pool; readings and roll-ups, to read.
 import type { Pool } from '#lib/server/db/pool.ts';
+import { bucketSql } from './roll-up-sql.ts';
 
 export interface TrendBucket {
 	/** Begin of the bucket, milliseconds. */
 	at: number;
 	min: number | null;
 	max: number | null;
-	/** Weighted by time: each value counts until the next reading or the bucket's end. Null where there is none. */
+	/** Weighted by time; null where nothing stood. */
 	mean: number | null;
 	n: number;
 	/** Worst quality of the bucket. */
 	worst: number;
 }
 
+/** From what a trend was drawn: readings themselves, or roll-ups of a minute or an hour. */
+export type TrendLevel = 'readings' | 'minute' | 'hour';
+
+export interface Trend {
+	buckets: TrendBucket[];
+	widthS: number;
+	level: TrendLevel;
+}
+
+const HOUR_S = 3_600;
 /** Widths a bucket may have, so that what is written beside a trend is a plain span of time. */
 const WIDTHS_S = [
 	1, 2, 5, 10, 15, 30, 60, 120, 300, 600, 900, 1_800, 3_600, 7_200, 14_400, 21_600, 43_200, 86_400, 172_800, 604_800,
@@ -24,39 +35,109 @@ export function bucketWidthS(rangeMs: number, points: number): number {
 	return WIDTHS_S.find((width) => width >= least) ?? Math.ceil(least / 604_800) * 604_800;
 }
 
+/** The coarsest roll-up whose rows a bucket of this width is made of whole. */
+function levelOf(widthS: number): TrendLevel {
+	return widthS >= HOUR_S ? 'hour' : widthS >= 60 ? 'minute' : 'readings';
+}
+
+interface Part {
+	begin_s: number;
+	n: number;
+	min: number | null;
+	max: number | null;
+	area: number;
+	covered_s: number;
+	worst: number;
+}
+
 /**
  * A tag's course over [from, to) in at most `points` buckets; buckets without a reading are left out, so that a gap stays a gap.
+ * Wide buckets are made of roll-ups, so that a year costs about what a day does; what these do not hold yet is made of the readings.
  * Only readings in the unit that stands now.
  */
-export async function findTrend(
+export async function findTrend(pool: Pool, tagId: number, from: number, to: number, points: number): Promise<Trend> {
+	// Buckets begin at multiples of their width, so one more may be touched at the left edge.
+	const widthS = bucketWidthS(to - from, Math.max(1, points - 1));
+	const level = levelOf(widthS);
+	const begin = floorTo(from, widthS);
+	if (level === 'readings') return { widthS, level, buckets: merge([await ofReadings(pool, tagId, begin, to, widthS)]) };
+	const found = await pool.query<{ until: Date }>(
+		'SELECT p.minute_until AS until FROM tags t JOIN rollup_progress p ON p.site_id = t.site_id WHERE t.id = $1',
+		[tagId],
+	);
+	const minuteUntil = Math.max(begin, floorTo(Math.min(to, found.rows[0]?.until.getTime() ?? 0), 60));
+	const hourUntil = Math.max(begin, floorTo(minuteUntil, HOUR_S));
+	const parts = await Promise.all([
+		level === 'hour' ? ofRollUps(pool, 'rollups_hour', tagId, begin, hourUntil, widthS) : [],
+		ofRollUps(pool, 'rollups_minute', tagId, level === 'hour' ? hourUntil : begin, minuteUntil, widthS),
+		ofReadings(pool, tagId, minuteUntil, to, widthS),
+	]);
+	return { widthS, level, buckets: merge(parts) };
+}
+
+const iso = (at: number) => new Date(at).toISOString();
+const floorTo = (at: number, widthS: number) => Math.floor(at / 1_000 / widthS) * widthS * 1_000;
+
+async function ofRollUps(
 	pool: Pool,
+	table: 'rollups_minute' | 'rollups_hour',
 	tagId: number,
 	from: number,
 	to: number,
-	points: number,
-): Promise<{ buckets: TrendBucket[]; widthS: number }> {
-	// Buckets begin at multiples of their width, so one more may be touched at the left edge.
-	const widthS = bucketWidthS(to - from, Math.max(1, points - 1));
-	const found = await pool.query<{
-		at: number;
-		min: number | null;
-		max: number | null;
-		mean: number | null;
-		n: number;
-		worst: string;
-	}>(
-		`WITH spans AS (
-			SELECT floor(extract(epoch FROM r.at) / $4)::bigint AS bucket, r.value, r.quality, extract(epoch FROM r.at) AS s,
-				extract(epoch FROM lead(r.at) OVER (ORDER BY r.at)) AS next_s
-			FROM reading_history r JOIN tags t ON t.id = r.tag_id
-			WHERE r.tag_id = $1 AND r.at >= $2 AND r.at < $3 AND r.hour >= date_trunc('hour', $2::timestamptz, 'UTC') AND r.hour < $3 AND r.revision >= t.unit_revision)
-		 SELECT (bucket * $4 * 1000)::float8 AS at, min(value) AS min, max(value) AS max, count(value)::int AS n,
-			CASE WHEN count(value) = 0 THEN NULL
-				ELSE coalesce(sum(value * w) / nullif(sum(w) FILTER (WHERE value IS NOT NULL), 0), avg(value)) END AS mean,
-			max(quality::bit(32)::bigint)::text AS worst
-		 FROM (SELECT *, greatest(0, least(coalesce(next_s, (bucket + 1) * $4), (bucket + 1) * $4) - s)::float8 AS w FROM spans) weighed
-		 GROUP BY bucket ORDER BY bucket`,
-		[tagId, new Date(from).toISOString(), new Date(to).toISOString(), widthS],
+	widthS: number,
+): Promise<Part[]> {
+	if (to <= from) return [];
+	const found = await pool.query<Part>(
+		`SELECT (floor(extract(epoch FROM r.bucket)::float8 / $4) * $4)::float8 AS begin_s, sum(r.n)::int AS n, min(r.min) AS min, max(r.max) AS max,
+			sum(r.area) AS area, sum(r.covered_s) AS covered_s, max(r.worst::bit(32)::bigint)::float8 AS worst
+		 FROM ${table} r WHERE r.tag_id = $1 AND r.bucket >= $2 AND r.bucket < $3
+			AND r.unit_revision = (SELECT unit_revision FROM tags WHERE id = $1)
+		 GROUP BY 1`,
+		[tagId, iso(from), iso(to), widthS],
 	);
-	return { widthS, buckets: found.rows.map((row) => ({ ...row, worst: Number(row.worst) >>> 0 })) };
+	return found.rows;
+}
+
+async function ofReadings(pool: Pool, tagId: number, from: number, to: number, widthS: number): Promise<Part[]> {
+	if (to <= from) return [];
+	const found = await pool.query<Part>(
+		`SELECT begin_s, n, min, max, area, covered_s, worst::float8 AS worst
+		 FROM (${bucketSql('SELECT $1::int AS tag_id, $2::timestamptz AS a, $3::timestamptz AS b', '$4::float8')}) AS made`,
+		[tagId, iso(from), iso(to), widthS],
+	);
+	return found.rows;
+}
+
+/** One bucket a begin, in order; a bucket at the edge may be made of hours, minutes and readings together. */
+function merge(lists: readonly Part[][]): TrendBucket[] {
+	const byBegin = new Map<number, Part>();
+	for (const part of lists.flat()) {
+		const known = byBegin.get(part.begin_s);
+		if (!known) {
+			byBegin.set(part.begin_s, { ...part });
+			continue;
+		}
+		known.n += part.n;
+		known.min = known.min === null ? part.min : part.min === null ? known.min : Math.min(known.min, part.min);
+		known.max = known.max === null ? part.max : part.max === null ? known.max : Math.max(known.max, part.max);
+		known.area += part.area;
+		known.covered_s += part.covered_s;
+		known.worst = Math.max(known.worst, part.worst);
+	}
+	return [...byBegin.values()]
+		.sort((a, b) => a.begin_s - b.begin_s)
+		.map((part) => ({
+			at: part.begin_s * 1_000,
+			min: part.min,
+			max: part.max,
+			mean: meanOf(part),
+			n: part.n,
+			worst: part.worst >>> 0,
+		}));
+}
+
+function meanOf(part: Part): number | null {
+	if (part.covered_s > 0) return part.area / part.covered_s;
+	// A single value at the very end of a bucket stood for no time in it.
+	return part.min === null || part.max === null ? null : (part.min + part.max) / 2;
 }

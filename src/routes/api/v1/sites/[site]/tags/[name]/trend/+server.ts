@@ -17,6 +17,9 @@ export const GET = api(
 		query: z.strictObject({ from: timeParam.optional(), to: timeParam.optional(), points: intParam(1, 10_000).default(500) }),
 		answer: z.object({
 			unit: z.string(),
+			/** Width of an item in seconds, and from what it was drawn. */
+			bucket_s: z.number(),
+			level: z.enum(['readings', 'minute', 'hour']),
 			items: z.array(
 				z.object({
 					at: z.iso.datetime(),
@@ -35,9 +38,11 @@ export const GET = api(
 		if (from >= to) throw badParameter('from', 'a time before `to`');
 		const tag = await findTag(db, site.id, params.name);
 		if (!tag) throw new Problem(404, 'tag-not-found', 'No published tag at this site has that name.');
-		const { buckets } = await findTrend(pool, tag.id, from, to, query.points);
+		const { buckets, widthS, level } = await findTrend(pool, tag.id, from, to, query.points);
 		return {
 			unit: tag.unit,
+			bucket_s: widthS,
+			level,
 			items: buckets.map(({ at, min, max, mean, n, worst }) => ({
 				at: toRfc3339(at),
 				min,
