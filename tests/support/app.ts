@@ -104,6 +104,7 @@ async function request(handle: Handle, path: string, ask: Ask): Promise<Response
 		cookies: cookiesOf(jar),
 		getClientAddress: () => ip,
 		setHeaders: () => undefined,
+		depends: () => undefined,
 		isDataRequest: false,
 		isSubRequest: false,
 		isRemoteRequest: false,
@@ -131,7 +132,9 @@ async function answer(event: RequestEvent, found: Matcher | undefined): Promise<
 		return new Response('', { status: 405, headers: { allow: Object.keys(loaded).join(', ') } });
 	}
 	if (method === 'POST') {
-		const act = (loaded.actions as Record<string, (event: RequestEvent) => unknown> | undefined)?.default;
+		// `?/name` is Kit's form of a named act.
+		const name = [...event.url.searchParams.keys()].find((key) => key.startsWith('/'))?.slice(1) ?? 'default';
+		const act = (loaded.actions as Record<string, (event: RequestEvent) => unknown> | undefined)?.[name];
 		if (!act) return new Response('', { status: 405 });
 		const result = (await act(event)) as { status?: number; data?: unknown } | undefined;
 		return Response.json(result && 'data' in result ? result.data : (result ?? null), { status: result?.status ?? 200 });

@@ -24,6 +24,7 @@ export const INSTALLATION_PERMISSIONS = [
 	'certificates:edit',
 	'mail:edit',
 	'backups:run',
+	'store:edit',
 	'installation:read',
 ] as const;
 

@@ -1,6 +1,7 @@
 // Edge: store. May touch: pool. One transaction a batch: readings, latest, alarms, judging states, and the feed's place in it.
 import type { Client, Pool } from '#lib/server/db/pool.ts';
 import { applyAlarmChanges } from './alarm-events.ts';
+import { keepDeadLetters } from './dead-letters.ts';
 import { appendJournal, type JournalEntry } from './feed-journal.ts';
 import { confirmLatest, upsertLatest } from './latest.ts';
 import type { JournalReading } from './journal-codec.ts';
@@ -61,14 +62,7 @@ async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: b
 			);
 		}
 		const test = await storeTestReadings(client, batch.testReadings);
-		for (const { reading, reason } of dead) {
-			await client.query('INSERT INTO dead_letters (site_id, tag_id, reason, row) VALUES ($1, $2, $3, $4)', [
-				reading.siteId,
-				reading.tagId,
-				reason,
-				JSON.stringify(printable(reading)),
-			]);
-		}
+		await keepDeadLetters(client, dead);
 		// Positions are given as the last act before commit, one writer of a site at a time.
 		const positions = await appendJournal(client, entriesOf(stored, test, batch), now);
 		await client.query('COMMIT');
@@ -85,13 +79,15 @@ async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: b
 	}
 }
 
-function printable(reading: StoredReading): Record<string, unknown> {
-	const text = (value: string | null) => value?.replaceAll('\u0000', '\\u0000') ?? null;
+/** What the journal keeps of a stored reading. */
+export function journalReadingOf(reading: StoredReading): JournalReading {
 	return {
-		...reading,
-		raw: reading.raw === null ? null : text(String(reading.raw)),
-		rawKept: text(reading.rawKept),
-		wire: text(reading.wire),
+		tagId: reading.tagId,
+		at: reading.at,
+		value: reading.value,
+		quality: reading.quality,
+		isHubTime: reading.timeFrom === 'hub',
+		isTest: false,
 	};
 }
 
@@ -108,16 +104,7 @@ function entriesOf(
 		bySite.set(siteId, made);
 		return made;
 	};
-	for (const reading of stored) {
-		entryOf(reading.siteId).readings.push({
-			tagId: reading.tagId,
-			at: reading.at,
-			value: reading.value,
-			quality: reading.quality,
-			isHubTime: reading.timeFrom === 'hub',
-			isTest: false,
-		});
-	}
+	for (const reading of stored) entryOf(reading.siteId).readings.push(journalReadingOf(reading));
 	for (const reading of test) entryOf(reading.siteId).readings.push(reading);
 	for (const event of batch.events) entryOf(event.siteId).events.push(event);
 	return bySite;
