@@ -105,6 +105,12 @@ export async function layDemo(databaseUrl: string, config: Config): Promise<void
 			if (!limits.ok) throw new Error(`the demo's limits are in error: ${JSON.stringify(limits.faults.slice(0, 5))}`);
 		}
 		await layHistory(pool, Date.now());
+		// The plant has a day behind it: its map and limits stood since then.
+		for (const [table, column] of [
+			['map_revisions', 'published_at'],
+			['limit_revisions', 'saved_at'],
+		] as const)
+			await pool.query(`UPDATE ${table} SET ${column} = ${column} - interval '1 day'`);
 		await pool.query('UPDATE installation SET is_demo = true');
 	} finally {
 		await pool.end();

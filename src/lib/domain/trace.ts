@@ -25,6 +25,17 @@ export interface TraceHop {
 	mark: 'changed' | 'spoiled' | 'alert' | 'danger' | null;
 }
 
+/** Another way to read the same bytes, carried on by the tag's own scale and conversion. */
+export interface OtherDecoding {
+	/** What differs from the tag's own way: `low word first`, `uint16, bytes swapped`. */
+	words: string;
+	raw: number;
+	/** In the raw unit. */
+	scaled: number;
+	/** In the tag's unit. */
+	value: number;
+}
+
 /** A value's way. */
 export interface Trace {
 	tag: string;
@@ -35,4 +46,6 @@ export interface Trace {
 	value: number | null;
 	unit: string;
 	hops: TraceHop[];
+	/** Empty where the source gives no bytes. */
+	decodings: OtherDecoding[];
 }

@@ -105,6 +105,21 @@ export interface TrendItem {
 	n: number;
 	worst: QualityJson | number | null;
 }
+export interface TrendJson {
+	unit: string;
+	bucket_s: number;
+	limits: {
+		kind: 'high' | 'low';
+		level: 'alert' | 'danger';
+		value: number;
+		from: string;
+		to: string | null;
+		origin: string;
+		note: string | null;
+	}[];
+	events: { at: string; kind: 'published' | 'limits'; revision: number; by: string; note: string }[];
+	items: TrendItem[];
+}
 export interface Page<T> {
 	items: T[];
 	next: string | null;

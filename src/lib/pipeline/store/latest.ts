@@ -23,7 +23,7 @@ export async function upsertLatest(client: Client, updates: readonly LatestUpdat
 		 WHERE EXISTS (SELECT FROM tags t WHERE t.id = g.tag_id AND g.revision >= t.unit_revision)
 		 ON CONFLICT (tag_id) DO UPDATE SET at = excluded.at, value = excluded.value, quality = excluded.quality, received_at = excluded.received_at,
 			confirmed_at = greatest(l.confirmed_at, excluded.confirmed_at), is_hub_time = excluded.is_hub_time, source_at = excluded.source_at, reason = excluded.reason,
-			raw = excluded.raw, wire = coalesce(excluded.wire, l.wire), verdict = excluded.verdict, is_stale = excluded.is_stale, revision = excluded.revision, updated_at = now()
+			raw = excluded.raw, wire = CASE WHEN excluded.at = l.at THEN coalesce(excluded.wire, l.wire) ELSE excluded.wire END, verdict = excluded.verdict, is_stale = excluded.is_stale, revision = excluded.revision, updated_at = now()
 		 WHERE excluded.at >= l.at OR excluded.tag_id = ANY($16::int[])`,
 		[
 			rows.map((row) => row.tagId),

@@ -8,6 +8,7 @@ import type { Trace, TraceHop } from '#lib/domain/trace.ts';
 import { compileRow } from '#lib/pipeline/normalize/compile-row.ts';
 import { rebuildRaw } from '#lib/pipeline/normalize/raw-to-store.ts';
 import { unitLabel } from '#lib/pipeline/normalize/units/quantity.ts';
+import { otherDecodings } from './other-decodings.ts';
 
 /** What is known of a value's way; times in milliseconds. */
 export interface KnownWay {
@@ -236,5 +237,6 @@ export function layHops(way: KnownWay): Trace {
 		value: way.value,
 		unit: way.unit,
 		hops,
+		decodings: plan ? otherDecodings(way.wire, rawNumber, plan) : [],
 	};
 }

@@ -35,6 +35,7 @@ export const GET = api(
 			value: z.number().nullable(),
 			unit: z.string(),
 			hops: z.array(hopJson),
+			decodings: z.array(z.object({ words: z.string(), raw: z.number(), scaled: z.number(), value: z.number() })),
 		}),
 	},
 	async ({ db, pool, site, params, query }) => {

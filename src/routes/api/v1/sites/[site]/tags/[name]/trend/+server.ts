@@ -1,5 +1,6 @@
 import { z } from 'zod';
 import { qualityJson } from '#lib/domain/quality.ts';
+import { findCourseEvents, findLimitCourse } from '#lib/server/limits/find-limit-course.ts';
 import { findTrend } from '#lib/pipeline/store/find-trend.ts';
 import { qualitySchema } from '#lib/server/feed/answer-schema.ts';
 import { api } from '#lib/server/http/api.ts';
@@ -20,6 +21,28 @@ export const GET = api(
 			/** Width of an item in seconds, and from what it was drawn. */
 			bucket_s: z.number(),
 			level: z.enum(['readings', 'minute', 'hour']),
+			/** High and low limits in force at some time of the range; `to` is null while it stands. */
+			limits: z.array(
+				z.object({
+					kind: z.enum(['high', 'low']),
+					level: z.enum(['alert', 'danger']),
+					value: z.number(),
+					from: z.iso.datetime(),
+					to: z.iso.datetime().nullable(),
+					origin: z.string(),
+					note: z.string().nullable(),
+				}),
+			),
+			/** Publishes that changed the tag, and changes of its limits. */
+			events: z.array(
+				z.object({
+					at: z.iso.datetime(),
+					kind: z.enum(['published', 'limits']),
+					revision: z.number().int(),
+					by: z.string(),
+					note: z.string(),
+				}),
+			),
 			items: z.array(
 				z.object({
 					at: z.iso.datetime(),
@@ -38,11 +61,21 @@ export const GET = api(
 		if (from >= to) throw badParameter('from', 'a time before `to`');
 		const tag = await findTag(db, site.id, params.name);
 		if (!tag) throw new Problem(404, 'tag-not-found', 'No published tag at this site has that name.');
-		const { buckets, widthS, level } = await findTrend(pool, tag.id, from, to, query.points);
+		const [{ buckets, widthS, level }, limits, events] = await Promise.all([
+			findTrend(pool, tag.id, from, to, query.points),
+			findLimitCourse(pool, tag.id, from, to),
+			findCourseEvents(pool, tag.id, from, to),
+		]);
 		return {
 			unit: tag.unit,
 			bucket_s: widthS,
 			level,
+			limits: limits.map((limit) => ({
+				...limit,
+				from: toRfc3339(limit.from),
+				to: limit.to === null ? null : toRfc3339(limit.to),
+			})),
+			events: events.map((event) => ({ ...event, at: toRfc3339(event.at) })),
 			items: buckets.map(({ at, min, max, mean, n, worst }) => ({
 				at: toRfc3339(at),
 				min,
