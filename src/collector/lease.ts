@@ -51,6 +51,15 @@ export async function renewLeases(pool: Pool, owner: Owner): Promise<Set<string>
 	return new Set(held.rows.map((row) => row.source_id));
 }
 
+/** Sources that nobody but this instance has held since it last held them; `mine` where it was not given back. */
+export async function readOwnLeases(pool: Pool, owner: Owner): Promise<Map<string, { mine: boolean }>> {
+	const found = await pool.query<{ source_id: string; mine: boolean }>(
+		'SELECT source_id, owner IS NOT NULL AS mine FROM source_leases WHERE instance = $1',
+		[owner.instance],
+	);
+	return new Map(found.rows.map((row) => [row.source_id, { mine: row.mine }]));
+}
+
 /** Gives leases back at a clean stop, so that another collector need not wait for their end. */
 export async function releaseLeases(pool: Pool, owner: Owner): Promise<void> {
 	await pool.query('UPDATE source_leases SET owner = NULL, until = clock_timestamp() WHERE owner = $1', [owner.id]);

@@ -6,11 +6,14 @@ import { join } from 'node:path';
 import { createSource } from '#lib/pipeline/sources/create-source.ts';
 import { createCopyWriter } from '#lib/pipeline/store/copy-writer.ts';
 import { ensurePartitionsAhead } from '#lib/pipeline/store/partitions.ts';
+import { Spool } from '#lib/pipeline/store/spool.ts';
+import { LossLedger } from '#lib/pipeline/loss-ledger.ts';
 import { Pipeline } from '#lib/pipeline/pipeline.ts';
 import { readConfig } from '#lib/server/config.ts';
 import { createPool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
 import { listenFor } from './bell.ts';
+import { CollectorCache } from './cache.ts';
 import { syncTrusted } from './certificate-store.ts';
 import { registerCollector, type Owner } from './lease.ts';
 import { startRollUps } from './roll-ups.ts';
@@ -30,34 +33,35 @@ async function main(): Promise<void> {
 	const config = readConfig();
 	if (!config.databaseUrl) throw new Error('DATABASE_URL is not set: start with `npm start`, or `npm run collector` beside it');
 	const pool = createPool(config.databaseUrl, { name: 'millrace-collector', max: 8, statementTimeoutMs: 60_000 });
-	const owner: Owner = { id: randomUUID(), instance: `${folderId(config.dataFolder)}/${config.collectorName}` };
+	const folder = folderId(config.dataFolder);
+	const owner: Owner = { id: randomUUID(), instance: `${folder}/${config.collectorName}` };
 	const now = () => Date.now();
-	for (let tries = 0; ; tries += 1) {
-		try {
-			await ensurePartitionsAhead(pool, now());
-			await registerCollector(pool, owner, hostname(), process.pid);
-			break;
-		} catch (error) {
-			if (tries > 240) throw error;
-			if (tries === 0) log.warn({ error: (error as Error).message }, 'the database does not answer yet');
-			await new Promise((resolve) => setTimeout(resolve, 500));
-		}
-	}
-	const { uid } = (await pool.query<{ uid: string }>('SELECT uid FROM installation')).rows[0] ?? { uid: 'unknown' };
+	const file = (kind: string) => join(config.dataFolder, 'collector', `${config.collectorName}.${kind}.db`);
+	const spool = new Spool({ path: file('spool'), ...config.spool, now }, new LossLedger());
+	const cache = new CollectorCache(file('cache'), now());
+	let installation = cache.read('installation');
+	const register = async () => {
+		await ensurePartitionsAhead(pool, now());
+		await registerCollector(pool, owner, hostname(), process.pid);
+		installation = (await pool.query<{ uid: string }>('SELECT uid FROM installation')).rows[0]?.uid ?? null;
+		if (installation) cache.save('installation', installation);
+	};
 	const pkiFolder = join(config.dataFolder, 'pki');
 	const writer = createCopyWriter(pool, { now });
-	const pipeline = new Pipeline(writer, now);
+	const pipeline = new Pipeline(writer, now, { spool, remember: (tags) => cache.remember(tags) });
 	const supervisor = new Supervisor({
 		pool,
 		pipeline,
 		owner,
 		now,
+		cache,
+		register,
 		prepare: () => syncTrusted(pool, pkiFolder),
 		create: async (plan, counts) => {
-			await syncTrusted(pool, pkiFolder).catch(() => undefined);
+			if (!pipeline.isDown) await syncTrusted(pool, pkiFolder).catch(() => undefined);
 			return createSource(
 				{ id: plan.id, kind: plan.kind, settings: plan.settings },
-				{ observer: counts, pkiFolder, installationId: uid, now },
+				{ observer: counts, pkiFolder, installationId: installation ?? 'unknown', now },
 			);
 		},
 	});

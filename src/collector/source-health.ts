@@ -10,6 +10,16 @@ const LATENCIES = 512;
 const EXCHANGES = 20;
 /** At most this many exchanges a source are written each time, so that a storm of failures fills no disk. */
 const MOST_WRITTEN = 40;
+/** Events and minutes that wait while the database is away: a night's worth of an unsteady source, two days of minutes. */
+const MOST_EVENTS = 1_000;
+const MOST_MINUTES = 2_880;
+
+interface SourceEvent {
+	at: number;
+	level: 'note' | 'warning' | 'error';
+	code: string;
+	text: string;
+}
 
 interface Minute {
 	good: number;
@@ -25,7 +35,6 @@ export class SourceCounts implements SourceObserver {
 	good = 0;
 	bad = 0;
 	duplicates = 0;
-	dropped = 0;
 	requests = 0;
 	failures = 0;
 	reconnects = 0;
@@ -34,13 +43,15 @@ export class SourceCounts implements SourceObserver {
 	subscribedAt: number | null = null;
 	readonly #now: () => number;
 	#latencies: number[] = [];
-	#events: { at: number; level: 'note' | 'warning' | 'error'; code: string; text: string }[] = [];
+	#events: SourceEvent[] = [];
+	#eventsLost = 0;
 	#ring: Exchange[] = [];
 	#toWrite: Exchange[] = [];
 	#afterFailure = 0;
 	#minute = emptyMinute();
 	#minuteAt = 0;
-	#written = { good: 0, bad: 0, requests: 0, failures: 0, reconnects: 0, dropped: 0, duplicates: 0 };
+	#doneMinutes: { at: number; minute: Minute; p50: number | null; p95: number | null }[] = [];
+	#written = { good: 0, bad: 0, requests: 0, failures: 0, reconnects: 0, duplicates: 0 };
 
 	constructor(now: () => number) {
 		this.#now = now;
@@ -48,7 +59,9 @@ export class SourceCounts implements SourceObserver {
 
 	event(level: 'note' | 'warning' | 'error', code: string, text: string): void {
 		this.#events.push({ at: this.#now(), level, code, text });
-		if (this.#events.length > 200) this.#events.shift();
+		if (this.#events.length <= MOST_EVENTS) return;
+		this.#events.shift();
+		this.#eventsLost += 1;
 	}
 
 	exchange(exchange: Exchange): void {
@@ -117,18 +130,17 @@ export class SourceCounts implements SourceObserver {
 			requests: this.requests,
 			failures: this.failures,
 			reconnects: this.reconnects,
-			dropped: this.dropped,
 			duplicates: this.duplicates,
 		};
 		const plus = (key: keyof typeof now) => now[key] - this.#written[key];
 		await pool.query(
-			`INSERT INTO source_health AS h (source_id, state, since, advice, last_good_at, subscribed_at, good, bad, duplicates, dropped, requests, failures, reconnects, tags, stale_tags,
+			`INSERT INTO source_health AS h (source_id, state, since, advice, last_good_at, subscribed_at, good, bad, duplicates, requests, failures, reconnects, tags, stale_tags,
 				latency_p50_ms, latency_p95_ms, clock_skew_ms, updated_at)
-			 VALUES ($1, $2, now(), $3, $4, $5, $6, $7, $8, $9, $10, $11, $12, $13, $14, $15, $16, $17, now())
+			 VALUES ($1, $2, now(), $3, $4, $5, $6, $7, $8, $9, $10, $11, $12, $13, $14, $15, $16, now())
 			 ON CONFLICT (source_id) DO UPDATE SET state = $2, since = CASE WHEN h.state = $2 THEN h.since ELSE now() END, advice = $3,
-				last_good_at = coalesce($4, h.last_good_at), subscribed_at = $5, good = h.good + $6, bad = h.bad + $7, duplicates = h.duplicates + $8, dropped = h.dropped + $9,
-				requests = h.requests + $10, failures = h.failures + $11, reconnects = h.reconnects + $12, tags = $13, stale_tags = $14,
-				latency_p50_ms = $15, latency_p95_ms = $16, clock_skew_ms = $17, updated_at = now()`,
+				last_good_at = coalesce($4, h.last_good_at), subscribed_at = $5, good = h.good + $6, bad = h.bad + $7, duplicates = h.duplicates + $8,
+				requests = h.requests + $9, failures = h.failures + $10, reconnects = h.reconnects + $11, tags = $12, stale_tags = $13,
+				latency_p50_ms = $14, latency_p95_ms = $15, clock_skew_ms = $16, updated_at = now()`,
 			[
 				source.id,
 				source.state,
@@ -138,7 +150,6 @@ export class SourceCounts implements SourceObserver {
 				plus('good'),
 				plus('bad'),
 				plus('duplicates'),
-				plus('dropped'),
 				plus('requests'),
 				plus('failures'),
 				plus('reconnects'),
@@ -150,7 +161,11 @@ export class SourceCounts implements SourceObserver {
 			],
 		);
 		this.#written = now;
-		const events = this.#events.splice(0);
+		// What waits goes only once it is written: an insert that failed is tried again.
+		const events = [...this.#events];
+		const lost = this.#eventsLost;
+		if (lost > 0 && events[0])
+			events.unshift({ ...events[0], level: 'warning', code: 'events-lost', text: `${lost} earlier events could not be kept` });
 		if (events.length > 0) {
 			await pool.query(
 				`INSERT INTO source_events (source_id, at, level, code, text) SELECT $1, g.at, g.level, g.code, g.text
@@ -163,8 +178,11 @@ export class SourceCounts implements SourceObserver {
 					events.map((one) => one.text),
 				],
 			);
+			const written = new Set(events);
+			this.#events = this.#events.filter((one) => !written.has(one));
+			this.#eventsLost -= lost;
 		}
-		const exchanges = this.#toWrite.splice(0);
+		const exchanges = [...this.#toWrite];
 		if (exchanges.length > 0) {
 			await pool.query(
 				`INSERT INTO source_exchanges (source_id, at, direction, bytes, meaning, failed) SELECT $1, g.at, g.direction, g.bytes, g.meaning, g.failed
@@ -178,33 +196,44 @@ export class SourceCounts implements SourceObserver {
 					exchanges.map((one) => one.failed),
 				],
 			);
+			const written = new Set(exchanges);
+			this.#toWrite = this.#toWrite.filter((one) => !written.has(one));
 		}
-		await this.#writeMinute(pool, source.id);
+		await this.#writeMinutes(pool, source.id);
 	}
 
-	async #writeMinute(pool: Pool, sourceId: string): Promise<void> {
+	/** Ends a minute that is over, so that what comes later counts to its own, whether or not the database is there. */
+	endMinute(): void {
 		const minute = Math.floor(this.#now() / 60_000) * 60_000;
 		if (this.#minuteAt === 0) this.#minuteAt = minute;
 		if (minute === this.#minuteAt) return;
-		const done = this.#minute;
-		const at = this.#minuteAt;
+		this.#doneMinutes.push({ at: this.#minuteAt, minute: this.#minute, p50: this.percentile(0.5), p95: this.percentile(0.95) });
+		if (this.#doneMinutes.length > MOST_MINUTES) this.#doneMinutes.shift();
 		this.#minute = emptyMinute();
 		this.#minuteAt = minute;
-		await pool.query(
-			`INSERT INTO source_minutes AS m (source_id, minute, good, bad, requests, failures, reconnects, latency_p50_ms, latency_p95_ms) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9)
-			 ON CONFLICT (source_id, minute) DO UPDATE SET good = m.good + excluded.good, bad = m.bad + excluded.bad, requests = m.requests + excluded.requests,
-				failures = m.failures + excluded.failures, reconnects = m.reconnects + excluded.reconnects`,
-			[
-				sourceId,
-				new Date(at).toISOString(),
-				done.good,
-				done.bad,
-				done.requests,
-				done.failures,
-				done.reconnects,
-				this.percentile(0.5),
-				this.percentile(0.95),
-			],
-		);
+	}
+
+	async #writeMinutes(pool: Pool, sourceId: string): Promise<void> {
+		this.endMinute();
+		for (let done = this.#doneMinutes[0]; done; done = this.#doneMinutes[0]) {
+			const { at, minute, p50, p95 } = done;
+			await pool.query(
+				`INSERT INTO source_minutes AS m (source_id, minute, good, bad, requests, failures, reconnects, latency_p50_ms, latency_p95_ms) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9)
+				 ON CONFLICT (source_id, minute) DO UPDATE SET good = m.good + excluded.good, bad = m.bad + excluded.bad, requests = m.requests + excluded.requests,
+					failures = m.failures + excluded.failures, reconnects = m.reconnects + excluded.reconnects`,
+				[
+					sourceId,
+					new Date(at).toISOString(),
+					minute.good,
+					minute.bad,
+					minute.requests,
+					minute.failures,
+					minute.reconnects,
+					p50,
+					p95,
+				],
+			);
+			if (this.#doneMinutes[0] === done) this.#doneMinutes.shift();
+		}
 	}
 }

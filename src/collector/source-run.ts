@@ -2,7 +2,6 @@
 import type { Pipeline } from '#lib/pipeline/pipeline.ts';
 import type { Advice, Sample, Source, SourceLink, WantedAddress } from '#lib/pipeline/sources/source.ts';
 import { SourceError } from '#lib/pipeline/sources/source.ts';
-import { clearConnectionAlarm, raiseConnectionAlarm } from '#lib/pipeline/store/alarm-events.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
 import type { SourcePlan } from './load-plans.ts';
@@ -192,17 +191,14 @@ export class SourceRun {
 				return false;
 			});
 		}
-		const answer = await this.#options.pipeline.accept(own, (isUsable, isDuplicate) => this.counts.sample(isUsable, isDuplicate));
-		if (typeof answer === 'object') {
-			this.counts.dropped += answer.dropped;
-			this.counts.event('error', 'dropped', `${answer.dropped} samples dropped: ${answer.reason}`);
-		}
-		return answer;
+		// What is dropped is counted by the pipeline, which tells it in this source's log.
+		return this.#options.pipeline.accept(own, (isUsable, isDuplicate) => this.counts.sample(isUsable, isDuplicate));
 	}
 
 	/** Once a second: who went stale, and how the source stands by the age of good data against what is expected of it. */
-	async tick(): Promise<void> {
+	tick(): void {
 		const { pipeline } = this.#options;
+		this.counts.endMinute();
 		const tags = this.plan.plans.flatMap((plan) => pipeline.tags.get(plan.tagId) ?? []);
 		const { mono } = pipeline.clock();
 		const overdue = tags.filter((tag) => tag.isOverdue(mono));
@@ -235,42 +231,31 @@ export class SourceRun {
 		else this.state = stale > 0 ? 'late' : this.link === null && this.advice ? 'late' : 'ok';
 		if (before !== this.state)
 			this.counts.event(this.state === 'ok' ? 'note' : 'warning', `state-${this.state}`, WORDS[this.state]);
-		await this.#connectionAlarm(tags.filter((tag) => tag.isSuppressed).length);
+		this.#connectionAlarm(tags.filter((tag) => tag.isSuppressed).length);
 	}
 
 	/** One connection alarm for a lost source; raised again after a restart it stays the same one. */
-	async #connectionAlarm(suppressed: number): Promise<void> {
-		const { pool, pipeline } = this.#options;
-		const { now } = pipeline.clock();
-		const source = { sourceId: this.plan.id, siteId: this.plan.siteId, at: now, suppressed };
+	#connectionAlarm(suppressed: number): void {
+		const { pipeline } = this.#options;
+		const tell = (kind: 'lost' | 'back') =>
+			pipeline.add((pending, { now }) =>
+				pending.connections.push({
+					kind,
+					sourceId: this.plan.id,
+					siteId: this.plan.siteId,
+					source: this.plan.name,
+					at: now,
+					suppressed,
+				}),
+			);
 		if (this.state === 'lost' && (this.#isAlarmed !== true || suppressed > this.#toldSuppressed)) {
-			const isNew = await raiseConnectionAlarm(pool, source);
+			tell('lost');
 			this.#isAlarmed = true;
 			this.#toldSuppressed = suppressed;
-			if (isNew)
-				pipeline.add((pending) =>
-					pending.events.push({
-						siteId: this.plan.siteId,
-						event: 'source-lost',
-						at: now,
-						source: this.plan.name,
-						source_id: this.plan.id,
-					}),
-				);
 		} else if ((this.state === 'ok' || this.state === 'late') && this.#isAlarmed !== false && this.counts.lastGoodAt !== null) {
-			const wasOpen = await clearConnectionAlarm(pool, source);
+			tell('back');
 			this.#isAlarmed = false;
 			this.#toldSuppressed = 0;
-			if (wasOpen)
-				pipeline.add((pending) =>
-					pending.events.push({
-						siteId: this.plan.siteId,
-						event: 'source-back',
-						at: now,
-						source: this.plan.name,
-						source_id: this.plan.id,
-					}),
-				);
 		}
 	}
 

@@ -6,11 +6,14 @@ import { longestRawDays } from '#lib/pipeline/store/retention.ts';
 import type { Source } from '#lib/pipeline/sources/source.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
+import type { TagMemory } from '#lib/pipeline/tag-runtime.ts';
 import { answerRequests } from './answer-requests.ts';
-import { beat, HEARTBEAT_MS, releaseLeases, renewLeases, RENEW_MS, type Owner } from './lease.ts';
+import type { CollectorCache } from './cache.ts';
+import { beat, HEARTBEAT_MS, readOwnLeases, releaseLeases, renewLeases, RENEW_MS, type Owner } from './lease.ts';
 import { loadMemories, loadPlans, readFingerprint, type SourcePlan } from './load-plans.ts';
 import type { SourceCounts } from './source-health.ts';
 import { SourceRun } from './source-run.ts';
+import { tellLosses } from './tell-losses.ts';
 import { TestValues } from './test-values.ts';
 
 export interface SupervisorOptions {
@@ -21,6 +24,10 @@ export interface SupervisorOptions {
 	now(): number;
 	/** Runs before sources open, when what they need on disk may have changed. */
 	prepare?(): Promise<void>;
+	/** Makes this run known; asked once, as soon as the database answers. */
+	register?(): Promise<void>;
+	/** What a start without the database goes on from. */
+	cache?: CollectorCache;
 }
 
 const LOOK_MS = 1_000;
@@ -40,11 +47,14 @@ export class Supervisor {
 	#isStopped = false;
 	#looking: Promise<void> | null = null;
 	#lookAgain = false;
+	#isRegistered = false;
+	/** Since when nothing is sampled for want of a cache, and the sources that were held then. */
+	#unsampled: { since: number; held: string[] | null } | null = null;
 	#rate = { at: performance.now(), stored: 0, perS: 0 };
 
 	constructor(options: SupervisorOptions) {
 		this.#options = options;
-		this.#tests = new TestValues(options.pool, options.pipeline);
+		this.#tests = new TestValues(options.pool, options.pipeline, (tests) => options.cache?.save('tests', tests));
 		this.#jobs = createPipelineJobs(options.pool, options.now);
 		this.#packing = createPacking(options.pool, options.now);
 	}
@@ -54,46 +64,108 @@ export class Supervisor {
 	}
 
 	async start(): Promise<void> {
+		const { pool, pipeline, owner } = this.#options;
 		await this.#readRawDays().catch(() => undefined);
-		await this.#lease();
-		await this.look();
-		const every = (ms: number, work: () => Promise<void>) => {
+		const isThere = await pipeline.begin(() => this.#lease());
+		if (isThere) await this.look();
+		else this.#goOnFromCache();
+		const every = (ms: number, work: () => Promise<void> | void) => {
 			let isBusy = false;
-			this.#timers.push(
-				setInterval(() => {
-					if (isBusy || this.#isStopped) return;
-					isBusy = true;
-					work()
-						.catch((error: Error) => log.warn({ error: error.message }, 'a round of the collector failed and is tried again'))
-						.finally(() => (isBusy = false));
-				}, ms),
-			);
+			const round = async () => {
+				if (isBusy || this.#isStopped) return;
+				isBusy = true;
+				try {
+					await work();
+				} catch (error) {
+					this.#tryAgain(error as Error, 'a round of the collector failed and is tried again');
+				} finally {
+					isBusy = false;
+				}
+			};
+			this.#timers.push(setInterval(() => void round(), ms));
 		};
 		every(RENEW_MS, () => this.#lease());
-		every(HEARTBEAT_MS, () => beat(this.#options.pool, this.#options.owner, this.#stats()));
+		every(HEARTBEAT_MS, () => beat(pool, owner, this.#stats()));
 		every(LOOK_MS, () => this.look());
 		every(LOOK_MS, () => this.#tick());
 		every(HEALTH_MS, async () => {
 			for (const run of this.runs.values()) await run.writeHealth();
 		});
+		every(HEALTH_MS, () => this.#tellLosses());
 		every(LOOK_MS, () => this.#tests.look());
 		every(60_000, () => this.#jobs.run());
 		every(60_000, () => this.#packing.run());
 		every(60_000, () => this.#readRawDays());
-		void this.#jobs.run().catch((error: Error) => log.warn({ error: error.message }, 'maintenance failed and is tried again'));
+		every(60_000, () => pipeline.spool?.keepWithin());
+		void this.#jobs.run().catch((error: Error) => this.#tryAgain(error, 'maintenance failed and is tried again'));
+	}
+
+	/** While the database is away its absence is said by the pipeline, not by everybody who asks it. */
+	#tryAgain(error: Error, text: string): void {
+		log[this.#options.pipeline.isDown ? 'debug' : 'warn']({ error: error.message }, text);
+	}
+
+	/** The database is away at the start: what was held is sampled on, into the spool. Nobody else can take it without the database either. */
+	#goOnFromCache(): void {
+		const { cache, pipeline, now } = this.#options;
+		const plans = cache?.read('plans');
+		if (!plans || cache?.problem) {
+			this.#unsampled = { since: now(), held: null };
+			const text = 'the database is away, and there is no cache to go on from: nothing is sampled, which is counted as lost';
+			log.error({ problem: cache?.problem ?? 'nothing is in it' }, text);
+			return;
+		}
+		const memories = cache?.memories() ?? new Map<number, TagMemory>();
+		for (const { tagId, judging, latest } of pipeline.spool?.tags().tags ?? []) {
+			const known = memories.get(tagId);
+			memories.set(tagId, { judging: judging ?? known?.judging ?? null, latest: latest ?? known?.latest ?? null });
+		}
+		this.#held = new Set(plans.map((plan) => plan.id));
+		for (const plan of plans) {
+			for (const tag of plan.plans) pipeline.setTag(tag, memories.get(tag.tagId) ?? { judging: null, latest: null });
+			this.#run(plan);
+		}
+		this.#tests.restore(cache?.read('tests') ?? []);
+		log.warn(
+			{ sources: plans.length, tags: pipeline.tags.size },
+			'the database is away: sources run from the cache, into the spool',
+		);
+	}
+
+	#run(plan: SourcePlan): void {
+		const made = new SourceRun(plan, this.#options);
+		this.runs.set(plan.id, made);
+		made.start();
 	}
 
 	/** Renews; with the database away what is held is kept, since nobody else can take it either. */
 	async #lease(): Promise<void> {
-		const held = await renewLeases(this.#options.pool, this.#options.owner);
+		const { pool, owner, pipeline, register } = this.#options;
+		if (!this.#isRegistered) await register?.();
+		this.#isRegistered = true;
+		const { spool } = pipeline;
+		const isAsked = spool?.hasChanges || spool?.hasTags || this.#unsampled;
+		const own = isAsked ? await readOwnLeases(pool, owner) : null;
+		const held = await renewLeases(pool, owner);
 		const lost = [...this.#held].filter((id) => !held.has(id));
 		const won = [...held].filter((id) => !this.#held.has(id));
 		this.#held = held;
 		// A lease that could not be renewed belongs to somebody else, or the source is off: stop at once.
 		for (const id of lost) await this.#drop(id);
+		if (own) {
+			const foreign = spool?.judgedSources().filter((id) => !own.has(id) || !held.has(id)) ?? [];
+			if (foreign.length > 0) spool?.disown(foreign);
+			if (this.#unsampled) this.#unsampled.held ??= [...own].filter(([id, { mine }]) => mine && held.has(id)).map(([id]) => id);
+		}
 		if (won.length > 0) {
 			void this.look();
 		}
+	}
+
+	async #tellLosses(): Promise<void> {
+		const { pool, pipeline } = this.#options;
+		if (pipeline.isDown) return;
+		if (await tellLosses(pool, pipeline.losses)) pipeline.spool?.keepWithin();
 	}
 
 	/** Reads what is published when it changed since; one round at a time, and once more when asked meanwhile. */
@@ -103,7 +175,7 @@ export class Supervisor {
 			return this.#looking;
 		}
 		this.#looking = this.#lookOnce()
-			.catch((error: Error) => log.warn({ error: error.message }, 'the published map could not be read and is tried again'))
+			.catch((error: Error) => this.#tryAgain(error, 'the published map could not be read and is tried again'))
 			.finally(() => {
 				this.#looking = null;
 				if (this.#lookAgain && !this.#isStopped) {
@@ -147,10 +219,27 @@ export class Supervisor {
 				await run.setPlan(plan);
 			} else {
 				if (run) await run.stop();
-				const made = new SourceRun(plan, this.#options);
-				this.runs.set(plan.id, made);
-				made.start();
+				this.#run(plan);
 			}
+		}
+		this.#options.cache?.save(
+			'plans',
+			[...this.runs.values()].map((run) => run.plan),
+		);
+		this.#countUnsampled();
+	}
+
+	/** What sources that were held all the time should have given while nothing was sampled, by their tags' intervals. */
+	#countUnsampled(): void {
+		const { pipeline, now } = this.#options;
+		const unsampled = this.#unsampled;
+		if (!unsampled?.held) return;
+		this.#unsampled = null;
+		const ms = now() - unsampled.since;
+		for (const id of unsampled.held) {
+			const tags = this.runs.get(id)?.plan.plans ?? [];
+			const count = tags.reduce((sum, tag) => sum + Math.floor(ms / tag.intervalMs), 0);
+			pipeline.losses.add(id, 'not-sampled', Math.max(count, 1), unsampled.since, now());
 		}
 	}
 
@@ -162,12 +251,13 @@ export class Supervisor {
 		for (const tag of run.plan.plans) this.#options.pipeline.dropTag(tag.tagId);
 	}
 
-	async #tick(): Promise<void> {
-		for (const run of this.runs.values()) await run.tick();
+	#tick(): void {
+		for (const run of this.runs.values()) run.tick();
 	}
 
 	#stats(): Record<string, number> {
-		const { counts } = this.#options.pipeline;
+		const { counts, spool } = this.#options.pipeline;
+		const state = spool?.state;
 		const now = performance.now();
 		const seconds = (now - this.#rate.at) / 1_000;
 		if (seconds > 0.5) this.#rate = { at: now, stored: counts.stored, perS: (counts.stored - this.#rate.stored) / seconds };
@@ -176,6 +266,15 @@ export class Supervisor {
 			readings_per_s: Math.round(this.#rate.perS * 10) / 10,
 			sources: this.runs.size,
 			tags: this.#options.pipeline.tags.size,
+			...(state && {
+				spool_readings: state.readings,
+				spool_changes: state.changes,
+				spool_bytes: state.bytes,
+				spool_max_bytes: state.maxBytes,
+				spool_oldest_age_s: state.oldestAt === null ? 0 : Math.max(0, Math.round((this.#options.now() - state.oldestAt) / 1_000)),
+				spool_max_age_s: Math.round(state.maxAgeMs / 1_000),
+				spool_full: state.isFull ? 1 : 0,
+			}),
 			rss: process.memoryUsage.rss(),
 		};
 	}
@@ -190,7 +289,14 @@ export class Supervisor {
 		await Promise.race([stopped, new Promise((resolve) => setTimeout(resolve, STOP_MS).unref())]);
 		await this.#options.pipeline.close();
 		await Promise.race([stopped, new Promise((resolve) => setTimeout(resolve, STOP_MS).unref())]);
-		for (const run of this.runs.values()) await run.writeHealth().catch(() => undefined);
-		await releaseLeases(this.#options.pool, this.#options.owner).catch(() => undefined);
+		const { pool, owner, cache } = this.#options;
+		await Promise.all([...this.runs.values()].map((run) => run.writeHealth().catch(() => undefined)));
+		await this.#tellLosses().catch(() => undefined);
+		// Leases that were given back are nothing to go on from.
+		await releaseLeases(pool, owner).then(
+			() => cache?.save('plans', []),
+			() => undefined,
+		);
+		cache?.close();
 	}
 }

@@ -7,12 +7,14 @@ import type { Pipeline } from '#lib/pipeline/pipeline.ts';
 import type { TagAlarmChange } from '#lib/pipeline/store/write-batch.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 
-interface Standing {
+/** A test value that stands, with what its own judging remembers. */
+export interface StandingTest {
 	id: number;
 	tagId: number;
 	value: number;
 	until: number;
 	judging: JudgingState;
+	/** Monotonic. */
 	saidAt: number;
 }
 
@@ -22,15 +24,37 @@ const AGAIN_MS = 10_000;
 export class TestValues {
 	readonly #pool: Pool;
 	readonly #pipeline: Pipeline;
-	readonly #standing = new Map<number, Standing>();
+	readonly #standing = new Map<number, StandingTest>();
+	readonly #save: (tests: StandingTest[]) => void;
 
-	constructor(pool: Pool, pipeline: Pipeline) {
+	/** `save` keeps what stands for a start without the database. */
+	constructor(pool: Pool, pipeline: Pipeline, save: (tests: StandingTest[]) => void) {
 		this.#pool = pool;
 		this.#pipeline = pipeline;
+		this.#save = save;
+	}
+
+	/** Goes on with what stood when the last run of this collector ended. */
+	restore(tests: readonly StandingTest[]): void {
+		for (const test of tests) this.#standing.set(test.tagId, { ...test, saidAt: -Infinity });
+		this.goOn();
+	}
+
+	/** Without the database: what stands is said on, and ends by its deadline all the same. */
+	goOn(): void {
+		const { now } = this.#pipeline.clock();
+		for (const standing of this.#standing.values()) {
+			if (standing.until <= now) this.#end(standing);
+			else if (performance.now() - standing.saidAt >= AGAIN_MS) this.#say(standing);
+		}
 	}
 
 	/** Looks what stands now among this collector's tags; true readings go on being stored and judged beside it. */
 	async look(): Promise<void> {
+		if (this.#pipeline.isDown) {
+			this.goOn();
+			return;
+		}
 		const found = await this.#pool.query<{ id: number; tag_id: number; value: number; until: Date }>(
 			'SELECT DISTINCT ON (tag_id) id, tag_id, value, until FROM test_values WHERE ended_at IS NULL AND until > clock_timestamp() ORDER BY tag_id, id DESC',
 		);
@@ -70,7 +94,7 @@ export class TestValues {
 		});
 	}
 
-	#say(standing: Standing): void {
+	#say(standing: StandingTest): void {
 		const tag = this.#pipeline.tags.get(standing.tagId);
 		if (!tag) return;
 		standing.saidAt = performance.now();
@@ -99,10 +123,11 @@ export class TestValues {
 			standing.judging = judged.state;
 			for (const change of judged.changes) pending.alarmChanges.push({ ...change, tagId, siteId, isTest: true });
 		});
+		this.#save([...this.#standing.values()]);
 	}
 
 	/** The test is over: alarms that it raised clear with it. */
-	#end(standing: Standing): void {
+	#end(standing: StandingTest): void {
 		this.#standing.delete(standing.tagId);
 		const tag = this.#pipeline.tags.get(standing.tagId);
 		if (!tag) return;
@@ -112,6 +137,7 @@ export class TestValues {
 				pending.alarmChanges.push(endOfTest(tag.plan, direction as AlarmDirection, alarm.level, alarm.raisedAt, clock.now));
 			}
 		});
+		this.#save([...this.#standing.values()]);
 	}
 }
 

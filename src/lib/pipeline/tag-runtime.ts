@@ -2,7 +2,7 @@
 import { severityOf, STATUS_CODES } from '#lib/domain/quality.ts';
 import type { RawScalar, Reading, Verdict } from '#lib/domain/reading.ts';
 import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
-import { confirm, freshState, goStale, judge, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
+import { confirm, freshState, goStale, judge, type AlarmChange, type JudgingState } from '#lib/pipeline/evaluate/evaluate.ts';
 import { freshStretch, judgeLate, MOST_LATE, type LateStretch } from '#lib/pipeline/evaluate/judge-late.ts';
 import { shouldStore, type LastStored } from '#lib/pipeline/normalize/deadband.ts';
 import { normalize, type NormalizeContext } from '#lib/pipeline/normalize/normalize.ts';
@@ -72,6 +72,11 @@ export class TagRuntime {
 		this.latest = memory.latest;
 		this.aliveMono = mono;
 		this.isStale = memory.latest?.isStale ?? false;
+		// Held back before a restart, and neither raised nor forgotten by it.
+		if (this.isStale && memory.judging?.heldBack) {
+			this.#heldBack = memory.judging.heldBack.map((change) => this.#own(change));
+			this.isSuppressed = true;
+		}
 		// A source that reports changes says its last value again after a restart: that is no new reading.
 		if (memory.latest && !this.isStale) this.#last = memory.latest;
 	}
@@ -147,7 +152,8 @@ export class TagRuntime {
 		this.#last = reading;
 		this.isStale = false;
 		this.isSuppressed = false;
-		this.#heldBack = [];
+		// A bad reading ends the silence but not the stale alarm that was held back.
+		this.#heldBack = (this.judging?.heldBack ?? []).map((change) => this.#own(change));
 		this.latest = {
 			tagId: plan.tagId,
 			at: reading.at,
@@ -230,6 +236,14 @@ export class TagRuntime {
 		this.isSuppressed = false;
 		sink.alarmChanges.push(...this.#heldBack);
 		this.#heldBack = [];
+		if (!this.judging?.heldBack) return;
+		const { heldBack: _, ...state } = this.judging;
+		this.judging = state;
+		sink.touchJudging(this);
+	}
+
+	#own(change: AlarmChange): TagAlarmChange {
+		return { ...change, tagId: this.plan.tagId, siteId: this.plan.siteId, isTest: false };
 	}
 
 	/** True when nothing has come for the stale time. */
@@ -247,8 +261,9 @@ export class TagRuntime {
 		const { state, changes } = goStale(this.judging ?? freshState(), plan, clock.now, (clock.mono - this.aliveMono) / 1_000);
 		if (changes.length > 0 || !this.judging?.isStale) sink.touchJudging(this);
 		this.judging = state;
-		this.#heldBack.push(...changes.map((change) => ({ ...change, tagId: plan.tagId, siteId: plan.siteId, isTest: false })));
+		this.#heldBack.push(...changes.map((change) => this.#own(change)));
 		if (!this.isSuppressed) this.raiseStale(sink);
+		else if (changes.length > 0) this.judging = { ...state, heldBack: [...(state.heldBack ?? []), ...changes] };
 	}
 
 	/** Says once that the tag went stale: a reading without value for the feed, the last value kept as uncertain. `suppress` keeps its stale alarm back. */
@@ -275,7 +290,6 @@ export class TagRuntime {
 		this.#lastStored = { at: clock.now, value: null, quality: reading.quality };
 		// A tag that never brought a value is missed as well.
 		if (plan.limits.length > 0) {
-			this.#heldBack = [];
 			this.#judgeSilence(clock, sink);
 		}
 		if (this.latest) {

@@ -20,6 +20,9 @@ const schema = z.object({
 		.default('main'),
 	MILLRACE_DEMO: z.enum(['0', '1']).default('0'),
 	MILLRACE_LOG: z.enum(['debug', 'info', 'warn', 'error', 'silent']).default('info'),
+	MILLRACE_SPOOL_MAX_MB: z.coerce.number().int('a whole number').min(1).max(1_000_000).default(2_048),
+	MILLRACE_SPOOL_MAX_HOURS: z.coerce.number().positive().max(8_760).default(168),
+	MILLRACE_SPOOL_FREE_MB: z.coerce.number().int('a whole number').min(0).max(1_000_000).default(512),
 	MILLRACE_MAIL_FROM: z.string().default('Millrace <millrace@localhost>'),
 	MILLRACE_SMTP_URL: z
 		.string()
@@ -46,6 +49,8 @@ export interface Config {
 	databaseUrl: string | undefined;
 	/** Name of this collector within the data folder; two collectors of one folder bear two names. */
 	collectorName: string;
+	/** What a collector keeps on disk while PostgreSQL is away, at most; and the space that stays free on that disk. */
+	spool: { maxBytes: number; maxAgeMs: number; minFreeBytes: number };
 	isDemo: boolean;
 	logLevel: 'debug' | 'info' | 'warn' | 'error' | 'silent';
 	mailFrom: string;
@@ -86,6 +91,11 @@ export function readConfig(env: Record<string, string | undefined> = process.env
 		pgPort: e.MILLRACE_PG_PORT,
 		databaseUrl: e.DATABASE_URL,
 		collectorName: e.MILLRACE_COLLECTOR,
+		spool: {
+			maxBytes: e.MILLRACE_SPOOL_MAX_MB * 1024 * 1024,
+			maxAgeMs: e.MILLRACE_SPOOL_MAX_HOURS * 3_600_000,
+			minFreeBytes: e.MILLRACE_SPOOL_FREE_MB * 1024 * 1024,
+		},
 		isDemo: e.MILLRACE_DEMO === '1',
 		logLevel: e.MILLRACE_LOG,
 		mailFrom: e.MILLRACE_MAIL_FROM,

@@ -39,6 +39,8 @@ export interface JudgingState {
 	/** Readings in the window of rate limits: [time, value]. */
 	window: [number, number][];
 	isStale: boolean;
+	/** Changes of the stale alarm that are held back while their source is lost; absent when there are none. */
+	heldBack?: AlarmChange[];
 }
 
 /** A change of an alarm that travels with the readings that made it. */

@@ -1,6 +1,6 @@
 // Edge: store. May touch: alarm tables, in the caller's transaction.
 import type { Client } from '#lib/server/db/pool.ts';
-import type { TagAlarmChange } from './write-batch.ts';
+import type { ConnectionChange, FeedEvent, TagAlarmChange } from './write-batch.ts';
 
 const iso = (at: number) => new Date(at).toISOString();
 
@@ -23,7 +23,8 @@ export async function applyAlarmChanges(client: Client, changes: readonly TagAla
 						escalated_at = CASE WHEN $6 AND escalated_at IS NULL THEN $7::timestamptz ELSE escalated_at END,
 						limit_id = CASE WHEN $6 THEN coalesce($8::int, limit_id) ELSE limit_id END,
 						acknowledged_at = CASE WHEN $6 THEN NULL ELSE acknowledged_at END, acknowledged_by = CASE WHEN $6 THEN NULL ELSE acknowledged_by END
-					 WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND raised_at = $4 AND cleared_at IS NULL AND level_now IS DISTINCT FROM $5
+					 WHERE tag_id = $1 AND direction = $2 AND is_test = $3 AND raised_at <= $4 AND cleared_at IS NULL AND level_now IS DISTINCT FROM $5
+						AND NOT EXISTS (SELECT FROM alarm_events e WHERE e.alarm_id = alarms.id AND e.at = $7 AND e.kind = $9)
 					 RETURNING id`,
 					[
 						change.tagId,
@@ -34,6 +35,7 @@ export async function applyAlarmChanges(client: Client, changes: readonly TagAla
 						change.kind === 'escalated',
 						iso(change.at),
 						change.limitId || null,
+						change.kind,
 					],
 				);
 				await record(client, moved.rows[0]?.id, change);
@@ -109,42 +111,52 @@ async function record(client: Client, alarmId: number | undefined, change: TagAl
 	]);
 }
 
-/** Raises the one connection alarm of a lost source; its tags' stale alarms are suppressed as its consequence and counted. Harmless when it is raised already. */
-export async function raiseConnectionAlarm(
-	client: Pick<Client, 'query'>,
-	source: { sourceId: string; siteId: number; at: number; suppressed: number },
-): Promise<boolean> {
+/**
+ * Applies what became of sources' connections, in order: one alarm a lost source, its tags' stale alarms suppressed as its consequence and counted.
+ * Answers the events to tell; what is applied already changes nothing and tells nothing.
+ */
+export async function applyConnectionChanges(client: Client, changes: readonly ConnectionChange[]): Promise<FeedEvent[]> {
+	const events: FeedEvent[] = [];
+	for (const change of changes) {
+		const isNew = change.kind === 'lost' ? await raiseConnection(client, change) : await clearConnection(client, change);
+		if (isNew)
+			events.push({
+				siteId: change.siteId,
+				event: change.kind === 'lost' ? 'source-lost' : 'source-back',
+				at: change.at,
+				source: change.source,
+				source_id: change.sourceId,
+			});
+	}
+	return events;
+}
+
+async function raiseConnection(client: Client, { siteId, sourceId, at, suppressed }: ConnectionChange): Promise<boolean> {
 	const made = await client.query<{ id: number }>(
 		`INSERT INTO alarms (site_id, source_id, direction, kind, level, level_now, raised_at, suppressed_count)
-		 VALUES ($1, $2, 'connection', 'connection', 'alert', 'alert', $3, $4) ON CONFLICT DO NOTHING RETURNING id`,
-		[source.siteId, source.sourceId, iso(source.at), source.suppressed],
+		 SELECT $1, $2::uuid, 'connection', 'connection', 'alert', 'alert', $3::timestamptz, $4::int
+		 WHERE NOT EXISTS (SELECT FROM alarms WHERE source_id = $2 AND raised_at = $3) ON CONFLICT DO NOTHING RETURNING id`,
+		[siteId, sourceId, iso(at), suppressed],
 	);
 	const id = made.rows[0]?.id;
 	if (id === undefined) {
 		await client.query(
 			'UPDATE alarms SET suppressed_count = greatest(suppressed_count, $2) WHERE source_id = $1 AND cleared_at IS NULL',
-			[source.sourceId, source.suppressed],
+			[sourceId, suppressed],
 		);
 		return false;
 	}
-	await client.query("INSERT INTO alarm_events (alarm_id, at, kind, level) VALUES ($1, $2, 'raised', 'alert')", [
-		id,
-		iso(source.at),
-	]);
+	await client.query("INSERT INTO alarm_events (alarm_id, at, kind, level) VALUES ($1, $2, 'raised', 'alert')", [id, iso(at)]);
 	return true;
 }
 
-/** Clears a source's connection alarm; false when none was open. */
-export async function clearConnectionAlarm(
-	client: Pick<Client, 'query'>,
-	source: { sourceId: string; at: number },
-): Promise<boolean> {
+async function clearConnection(client: Client, { sourceId, at }: ConnectionChange): Promise<boolean> {
 	const cleared = await client.query<{ id: number }>(
-		'UPDATE alarms SET cleared_at = greatest($2::timestamptz, raised_at), level_now = NULL WHERE source_id = $1 AND cleared_at IS NULL RETURNING id',
-		[source.sourceId, iso(source.at)],
+		'UPDATE alarms SET cleared_at = greatest($2::timestamptz, raised_at), level_now = NULL WHERE source_id = $1 AND raised_at <= $2 AND cleared_at IS NULL RETURNING id',
+		[sourceId, iso(at)],
 	);
 	const id = cleared.rows[0]?.id;
 	if (id === undefined) return false;
-	await client.query("INSERT INTO alarm_events (alarm_id, at, kind) VALUES ($1, $2, 'cleared')", [id, iso(source.at)]);
+	await client.query("INSERT INTO alarm_events (alarm_id, at, kind) VALUES ($1, $2, 'cleared')", [id, iso(at)]);
 	return true;
 }

@@ -1,6 +1,6 @@
 // Edge: store. May touch: pool. One transaction a batch: readings, latest, alarms, judging states, and the feed's place in it.
 import type { Client, Pool } from '#lib/server/db/pool.ts';
-import { applyAlarmChanges } from './alarm-events.ts';
+import { applyAlarmChanges, applyConnectionChanges } from './alarm-events.ts';
 import { keepDeadLetters } from './dead-letters.ts';
 import { appendJournal, type JournalEntry } from './feed-journal.ts';
 import { confirmLatest, upsertLatest } from './latest.ts';
@@ -8,11 +8,14 @@ import type { JournalReading } from './journal-codec.ts';
 import { createFeedBell } from './feed-bell.ts';
 import { ensureJournalDay, ensureReadingDay, dayOf } from './partitions.ts';
 import { codeOf, NO_PARTITION, storeReadings } from './store-readings.ts';
-import type { StoredReading, WriteBatch, WriteResult } from './write-batch.ts';
+import type { FeedEvent, StoredReading, WriteBatch, WriteResult } from './write-batch.ts';
 
 export interface CopyWriter {
-	/** Writes a batch; rejects when the database is away, and then nothing of it is stored. */
-	write(batch: WriteBatch): Promise<WriteResult>;
+	/**
+	 * Writes a batch; rejects when the database is away, and then nothing of it is stored. `giveUp` cuts the connection of a write that does not end:
+	 * whether it was stored is unknown then, and writing it again is harmless.
+	 */
+	write(batch: WriteBatch, giveUp?: AbortSignal): Promise<WriteResult>;
 	/** Rings the last bell. */
 	close(): Promise<void>;
 }
@@ -21,10 +24,10 @@ export interface CopyWriter {
 export function createCopyWriter(pool: Pool, { now }: { now: () => number }): CopyWriter {
 	const bell = createFeedBell(pool);
 	return {
-		async write(batch) {
+		async write(batch, giveUp) {
 			for (let tries = 0; ; tries += 1) {
 				try {
-					const result = await writeOnce(pool, batch, now(), tries > 0);
+					const result = await writeOnce(pool, batch, now(), tries > 0, giveUp);
 					for (const [siteId, position] of result.positions) bell.ring(siteId, position);
 					return result;
 				} catch (error) {
@@ -44,13 +47,21 @@ async function mendPartitions(pool: Pool, error: unknown, batch: WriteBatch, now
 	return true;
 }
 
-async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: boolean): Promise<WriteResult> {
+async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: boolean, giveUp?: AbortSignal): Promise<WriteResult> {
 	const client = await pool.connect();
 	let broken: Error | undefined;
+	let isReleased = false;
+	const cut = () => {
+		isReleased = true;
+		client.release(new Error('given up'));
+	};
+	giveUp?.addEventListener('abort', cut, { once: true });
 	try {
+		if (giveUp?.aborted) throw new Error('given up');
 		await client.query('BEGIN');
 		const { stored, duplicates, dead } = await storeReadings(client, batch.readings, now, doubtAll);
 		await applyAlarmChanges(client, batch.alarmChanges);
+		const told = await applyConnectionChanges(client, batch.connections);
 		await upsertLatest(client, batch.latest);
 		await confirmLatest(client, batch.confirmations);
 		if (batch.judgingStates.length > 0) {
@@ -64,7 +75,7 @@ async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: b
 		const test = await storeTestReadings(client, batch.testReadings);
 		await keepDeadLetters(client, dead);
 		// Positions are given as the last act before commit, one writer of a site at a time.
-		const positions = await appendJournal(client, entriesOf(stored, test, batch), now);
+		const positions = await appendJournal(client, entriesOf(stored, test, [...told, ...batch.events]), now);
 		await client.query('COMMIT');
 		return { stored: stored.length, duplicates, deadLetters: dead.length, positions };
 	} catch (error) {
@@ -75,7 +86,8 @@ async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: b
 		}
 		throw error;
 	} finally {
-		client.release(broken);
+		giveUp?.removeEventListener('abort', cut);
+		if (!isReleased) client.release(broken);
 	}
 }
 
@@ -94,7 +106,7 @@ export function journalReadingOf(reading: StoredReading): JournalReading {
 function entriesOf(
 	stored: readonly StoredReading[],
 	test: readonly (JournalReading & { siteId: number })[],
-	batch: WriteBatch,
+	events: readonly FeedEvent[],
 ): Map<number, JournalEntry> {
 	const bySite = new Map<number, JournalEntry>();
 	const entryOf = (siteId: number) => {
@@ -106,7 +118,7 @@ function entriesOf(
 	};
 	for (const reading of stored) entryOf(reading.siteId).readings.push(journalReadingOf(reading));
 	for (const reading of test) entryOf(reading.siteId).readings.push(reading);
-	for (const event of batch.events) entryOf(event.siteId).events.push(event);
+	for (const event of events) entryOf(event.siteId).events.push(event);
 	return bySite;
 }
 

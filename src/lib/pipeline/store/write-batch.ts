@@ -36,6 +36,17 @@ export interface Confirmation {
 
 export type TagAlarmChange = AlarmChange & { tagId: number; siteId: number; isTest: boolean };
 
+/** A source was lost, or gives values again: its one connection alarm, and the event that receivers are told with it. */
+export interface ConnectionChange {
+	kind: 'lost' | 'back';
+	sourceId: string;
+	siteId: number;
+	source: string;
+	at: number;
+	/** Stale alarms suppressed as its consequence, so far. */
+	suppressed: number;
+}
+
 /** Something a receiver must know beside readings. */
 export interface FeedEvent {
 	siteId: number;
@@ -52,6 +63,7 @@ export interface WriteBatch {
 	latest: readonly LatestUpdate[];
 	confirmations: readonly Confirmation[];
 	alarmChanges: readonly TagAlarmChange[];
+	connections: readonly ConnectionChange[];
 	judgingStates: readonly { tagId: number; state: JudgingState }[];
 	testReadings: readonly (TestReading & { siteId: number })[];
 	events: readonly FeedEvent[];
@@ -70,6 +82,7 @@ export const EMPTY_BATCH: WriteBatch = {
 	latest: [],
 	confirmations: [],
 	alarmChanges: [],
+	connections: [],
 	judgingStates: [],
 	testReadings: [],
 	events: [],
