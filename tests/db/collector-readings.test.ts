@@ -83,10 +83,18 @@ describe('what a source hands over', () => {
 		expect(await site.values(id('late'))).toEqual([9, 1, 2]);
 		await until('latest', async () => (await site.latest('late'))?.value === 2);
 		// Found afterwards: recorded as late and closed, so that nobody is called.
-		const alarms = await site.pool.query('SELECT is_late, cleared_at IS NOT NULL AS closed FROM alarms WHERE tag_id = $1', [
-			id('late'),
-		]);
-		expect(alarms.rows).toEqual([{ is_late: true, closed: true }]);
+		// A late stretch is judged when none has come for ten seconds.
+		const alarms = await until(
+			'the alarm found afterwards',
+			async () => {
+				const found = await site.pool.query('SELECT is_late, cleared_at IS NOT NULL AS closed FROM alarms WHERE tag_id = $1', [
+					id('late'),
+				]);
+				return found.rows.length > 0 ? found.rows : null;
+			},
+			20_000,
+		);
+		expect(alarms).toEqual([{ is_late: true, closed: true }]);
 		expect((await site.latest('late'))?.verdict).toBe('normal');
 	});
 

@@ -1,17 +1,21 @@
 // Tests. A site with scripted devices, laid as people lay one, and collectors that run it in this process.
 import { randomUUID } from 'node:crypto';
+import { join } from 'node:path';
 import type { Limit } from '#lib/domain/limit.ts';
 import type { MapRow } from '#lib/domain/tag-map/row.ts';
+import { LossLedger } from '#lib/pipeline/loss-ledger.ts';
 import { Pipeline } from '#lib/pipeline/pipeline.ts';
 import { createCopyWriter } from '#lib/pipeline/store/copy-writer.ts';
 import { currentCursor, readFeed, resolveCursor, type FeedEntry } from '#lib/pipeline/store/find-feed.ts';
 import { findLatest, type LatestRow } from '#lib/pipeline/store/find-latest.ts';
+import { Spool } from '#lib/pipeline/store/spool.ts';
 import { ensurePartitionsAhead } from '#lib/pipeline/store/partitions.ts';
 import { createPool, type Pool } from '#lib/server/db/pool.ts';
 import { saveLimits } from '#lib/server/limits/save-limits.ts';
 import { addSite } from '#lib/server/people/add-site.ts';
 import { editDraft, type SentRow } from '#lib/server/tag-map/edit-draft.ts';
 import { publishDraft } from '#lib/server/tag-map/publish-draft.ts';
+import { CollectorCache } from '../../src/collector/cache.ts';
 import { registerCollector, type Owner } from '../../src/collector/lease.ts';
 import { Supervisor } from '../../src/collector/supervisor.ts';
 import { ScriptedDevice } from './scripted-source.ts';
@@ -111,19 +115,34 @@ export class CollectingSite {
 		if (!saved.ok) throw new Error(JSON.stringify(saved.faults));
 	}
 
-	/** Starts a collector with a pool of its own; it stops with the site unless stopped before. */
-	async start(instance: string = randomUUID()): Promise<Collector> {
+	/** Starts a collector with a pool of its own; it stops with the site unless stopped before. With a data folder it spools and has a cache. */
+	async start(instance: string = randomUUID(), data?: { folder: string; maxBytes?: number }): Promise<Collector> {
 		const pool = createPool(this.url, { name: 'collector', max: 6 });
 		const now = () => Date.now();
 		const owner: Owner = { id: randomUUID(), instance };
-		await registerCollector(pool, owner, 'localhost', process.pid);
+		const register = () => registerCollector(pool, owner, 'localhost', process.pid);
+		if (!data) await register();
 		const writer = createCopyWriter(pool, { now });
-		const pipeline = new Pipeline(writer, now);
+		const spool = data
+			? new Spool(
+					{
+						path: join(data.folder, 'spool.db'),
+						maxBytes: data.maxBytes ?? 64 * 1024 * 1024,
+						maxAgeMs: 3_600_000,
+						minFreeBytes: 0,
+						now,
+					},
+					new LossLedger(),
+				)
+			: null;
+		const cache = data ? new CollectorCache(join(data.folder, 'cache.db'), now()) : null;
+		const pipeline = new Pipeline(writer, now, cache ? { spool, remember: (tags) => cache.remember(tags) } : {});
 		const supervisor = new Supervisor({
 			pool,
 			pipeline,
 			owner,
 			now,
+			...(cache ? { cache, register } : {}),
 			create: (plan) => {
 				const device = this.devices.get(plan.id);
 				return device ? Promise.resolve(device.source()) : Promise.reject(new Error('no device of that source'));
@@ -138,6 +157,7 @@ export class CollectingSite {
 				if (!this.#collectors.delete(collector)) return;
 				await supervisor.stop();
 				await writer.close();
+				cache?.close();
 				await pool.end();
 			},
 		};

@@ -47,7 +47,13 @@ async function mendPartitions(pool: Pool, error: unknown, batch: WriteBatch, now
 	return true;
 }
 
-async function writeOnce(pool: Pool, batch: WriteBatch, now: number, doubtAll: boolean, giveUp?: AbortSignal): Promise<WriteResult> {
+async function writeOnce(
+	pool: Pool,
+	batch: WriteBatch,
+	now: number,
+	doubtAll: boolean,
+	giveUp?: AbortSignal,
+): Promise<WriteResult> {
 	const client = await pool.connect();
 	let broken: Error | undefined;
 	let isReleased = false;
