@@ -16,6 +16,9 @@ export interface Pulse {
 	slowest_reader: string | null;
 	/** False when no collector's heartbeat is younger than 10 s. */
 	collector_alive: boolean;
+	/** Readings that wait on a collector's disk, and for how long the oldest has; 0 when all is in the database. */
+	spooled: number;
+	spooled_for_s: number;
 	/** Rises when anything in the overview changed. */
 	change: string;
 	/** Rates of the last minute, in the first beat only. */

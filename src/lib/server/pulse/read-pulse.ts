@@ -15,6 +15,9 @@ export interface PulseRow {
 	slowest_lag_s: number | null;
 	slowest_reader: string | null;
 	collector_alive: boolean;
+	/** Readings that collectors keep on disk until the database has taken them, all sites together; and how long the oldest has waited. */
+	spooled: number;
+	spooled_for_s: number;
 	change: string;
 }
 
@@ -41,6 +44,9 @@ WITH source_figures AS (
 		AND NOT a.is_late
 		AND coalesce(ts.shelved_until < now(), true) AND NOT coalesce(ts.out_of_service, false)
 		AND (ts.suppressed_by IS NULL OR a.kind <> 'stale')
+), collector_figures AS (
+	SELECT coalesce(sum((stats->>'spool_readings')::float8), 0)::float8 AS spooled, coalesce(max((stats->>'spool_oldest_age_s')::float8), 0)::float8 AS spooled_for_s
+	FROM collectors WHERE heartbeat_at > now() - interval '1 hour'
 ), readers AS (
 	SELECT r.name, CASE WHEN r.position >= f.position THEN 0 ELSE
 		extract(epoch FROM now() - coalesce((SELECT min(j.committed_at) FROM feed_journal j
@@ -53,8 +59,9 @@ SELECT extract(epoch FROM clock_timestamp()) * 1000 AS at, sf.taken, sf.up AS so
 	tf.tags, tf.stale AS tags_stale, af.danger, af.alert, af.unacknowledged,
 	(SELECT greatest(lag, 0) FROM readers) AS slowest_lag_s, (SELECT name FROM readers) AS slowest_reader,
 	EXISTS (SELECT FROM collectors WHERE heartbeat_at > now() - interval '10 seconds') AS collector_alive,
+	cf.spooled, cf.spooled_for_s,
 	af.change || '|' || sf.states || '|' || tf.stale || '|' || tf.tags || '|' || af.danger || '|' || af.alert AS change
-FROM source_figures sf, tag_figures tf, alarm_figures af`;
+FROM source_figures sf, tag_figures tf, alarm_figures af, collector_figures cf`;
 
 /** Reads one beat in one statement. */
 export async function readPulse(pool: Pool, siteId: number): Promise<PulseRow> {
