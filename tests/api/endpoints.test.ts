@@ -280,6 +280,55 @@ describe('alarms', () => {
 			errors: [{ pointer: '/until' }],
 		});
 	});
+
+	it('of a tag out of service are marked with who, why and until when, and it comes back; a reason is asked for', async () => {
+		const out = `${at}/tags/pump1.de.v/out-of-service`;
+		const until = new Date(Date.now() + 3_600_000).toISOString();
+		expect(await problem(out, { json: { until } })).toMatchObject({ errors: [{ pointer: '/note' }] });
+		expect(await problem(out, { json: { until: '2020-01-01T00:00:00Z', note: 'overhaul' } })).toMatchObject({
+			errors: [{ pointer: '/until' }],
+		});
+		const done = await described(out, '/api/v1/sites/{site}/tags/{name}/out-of-service', { json: { until, note: 'overhaul' } });
+		expect(done).toEqual({ name: 'PUMP1.DE.V', tags: 1, out_of_service_until: until });
+		const marked = await described(`${at}/alarms?state=active-acknowledged`, '/api/v1/sites/{site}/alarms');
+		expect(marked.items).toMatchObject([{ out_of_service_until: until, out_of_service_note: 'overhaul' }]);
+		const entry = await app.sql.query("SELECT note, after FROM audit_entries WHERE action = 'tag.out-of-service'");
+		expect(entry.rows).toMatchObject([{ note: 'overhaul', after: { tags: 1, out_of_service_until: until } }]);
+		const back = () => app.ask(`${at}/tags/PUMP1.DE.V/return-to-service`, { key, method: 'POST' });
+		expect((await back()).status).toBe(200);
+		expect((await back()).status).toBe(409);
+	});
+
+	it('of a machine out of service: all its published tags, those of other machines not', async () => {
+		const machine = await app.sql.query<{ id: number }>(
+			"INSERT INTO machines (site_id, name) VALUES ($1, 'PUMP1') RETURNING id",
+			[plant.siteId],
+		);
+		const id = machine.rows[0]?.id;
+		await app.sql.query("UPDATE tags SET machine_id = $1 WHERE name = 'PUMP1.DE.V'", [id]);
+		const until = new Date(Date.now() + 3_600_000).toISOString();
+		expect(
+			await described(`${at}/machines/${id}/out-of-service`, '/api/v1/sites/{site}/machines/{id}/out-of-service', {
+				json: { until, note: 'planned outage' },
+			}),
+		).toEqual({ name: 'PUMP1', tags: 1, out_of_service_until: until });
+		const out = await app.sql.query(
+			'SELECT t.name FROM tag_states s JOIN tags t ON t.id = s.tag_id WHERE s.out_of_service_until > now()',
+		);
+		expect(out.rows).toEqual([{ name: 'PUMP1.DE.V' }]);
+		expect((await app.ask(`${at}/machines/${id}/return-to-service`, { key, method: 'POST' })).status).toBe(200);
+		expect((await app.ask(`${at}/machines/999999/return-to-service`, { key, method: 'POST' })).status).toBe(404);
+	});
+
+	it('are found by level, machine and part of a name', async () => {
+		const count = async (query: string) =>
+			(await described(`${at}/alarms?${query}`, '/api/v1/sites/{site}/alarms')).items.length as number;
+		expect(await count('level=alert')).toBe(1);
+		expect(await count('level=danger&machine=pump1')).toBe(2);
+		expect(await count('machine=pump2')).toBe(0);
+		expect(await count('search=de.v')).toBe(3);
+		expect(await count('search=%25')).toBe(0);
+	});
 });
 
 describe('the edges of the API', () => {

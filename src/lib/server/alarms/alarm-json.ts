@@ -10,6 +10,12 @@ export const alarmJson = z.object({
 	/** Null for an alarm of a source's connection. */
 	tag: z.string().nullable(),
 	source: z.string().nullable(),
+	machine: z.string().nullable(),
+	point: z.string().nullable(),
+	/** The detector that goes with `unit`. */
+	detector: z.string().nullable(),
+	/** Whom to call: as the machine says, else as its source does. */
+	contact: z.string().nullable(),
 	direction: z.enum(['up', 'down', 'state', 'stale', 'connection']),
 	kind: z.enum(['high', 'low', 'rate', 'deviation', 'stale', 'state', 'connection']),
 	level: z.enum(['alert', 'danger']),
@@ -31,6 +37,12 @@ export const alarmJson = z.object({
 	/** Stale alarms that this connection alarm stands for. */
 	suppressed: z.number().int(),
 	shelved_until: time.nullable(),
+	shelved_by: z.string().nullable(),
+	shelved_note: z.string().nullable(),
+	/** Judged all the same; nobody is called. */
+	out_of_service_until: time.nullable(),
+	out_of_service_by: z.string().nullable(),
+	out_of_service_note: z.string().nullable(),
 });
 export type AlarmJson = z.infer<typeof alarmJson>;
 
@@ -46,6 +58,10 @@ export interface AlarmRow {
 	tag: string | null;
 	unit: string | null;
 	source: string | null;
+	machine: string | null;
+	point: string | null;
+	detector: string | null;
+	contact: string | null;
 	direction: AlarmJson['direction'];
 	kind: AlarmJson['kind'];
 	level: 'alert' | 'danger';
@@ -61,15 +77,26 @@ export interface AlarmRow {
 	isTest: boolean;
 	suppressedCount: number;
 	shelvedUntil: Date | null;
+	shelvedBy: string | null;
+	shelvedNote: string | null;
+	outOfServiceUntil: Date | null;
+	outOfServiceBy: string | null;
+	outOfServiceNote: string | null;
 	limit: LimitColumns | null;
 }
 
 /** An alarm as answers show it; `limit` is the one it met, as it stood then. */
 export function toAlarmJson(row: AlarmRow, now: Date): AlarmJson {
+	const isShelved = row.shelvedUntil !== null && row.shelvedUntil > now;
+	const isOut = row.outOfServiceUntil !== null && row.outOfServiceUntil > now;
 	return {
 		id: row.id,
 		tag: row.tag,
 		source: row.source,
+		machine: row.machine,
+		point: row.point,
+		detector: row.detector,
+		contact: row.contact,
 		direction: row.direction,
 		kind: row.kind,
 		level: row.level,
@@ -87,6 +114,11 @@ export function toAlarmJson(row: AlarmRow, now: Date): AlarmJson {
 		late: row.isLate,
 		test: row.isTest,
 		suppressed: row.suppressedCount,
-		shelved_until: row.shelvedUntil && row.shelvedUntil > now ? row.shelvedUntil.toISOString() : null,
+		shelved_until: isShelved ? (row.shelvedUntil?.toISOString() ?? null) : null,
+		shelved_by: isShelved ? row.shelvedBy : null,
+		shelved_note: isShelved ? row.shelvedNote : null,
+		out_of_service_until: isOut ? (row.outOfServiceUntil?.toISOString() ?? null) : null,
+		out_of_service_by: isOut ? row.outOfServiceBy : null,
+		out_of_service_note: isOut ? row.outOfServiceNote : null,
 	};
 }

@@ -1,8 +1,10 @@
 // Edge: alarms. May touch: alarm tables.
 import { and, desc, eq, gte, inArray, isNotNull, isNull, lt, or, sql, type SQL } from 'drizzle-orm';
+import { alias } from 'drizzle-orm/pg-core';
 import type { AlarmState } from '#lib/domain/limit.ts';
 import type { Db } from '#lib/server/db/pool.ts';
 import { alarms, tagStates } from '#lib/server/db/schema/alarm.ts';
+import { machines } from '#lib/server/db/schema/site.ts';
 import { sources } from '#lib/server/db/schema/source.ts';
 import { limits, tags } from '#lib/server/db/schema/tag-map.ts';
 import { encodeCursor } from '#lib/server/http/cursor.ts';
@@ -14,6 +16,12 @@ export interface AlarmFilter {
 	states?: readonly AlarmState[];
 	/** Name of a tag. */
 	tag?: string;
+	/** Highest level reached. */
+	level?: 'alert' | 'danger';
+	/** Name of a machine. */
+	machine?: string;
+	/** Part of a tag's or a source's name. */
+	search?: string;
 	/** Half-open range of the raise, milliseconds. */
 	from?: number;
 	to?: number;
@@ -30,6 +38,9 @@ const STATE_SQL: Readonly<Record<AlarmState, SQL | undefined>> = {
 	closed: and(isNotNull(alarms.clearedAt), or(isNotNull(alarms.acknowledgedAt), eq(alarms.isLate, true))),
 };
 
+/** The source of the alarm's tag; `sources` is that of a connection alarm. */
+const tagSource = alias(sources, 'tag_source');
+
 function select(db: Db) {
 	return db
 		.select({
@@ -37,6 +48,10 @@ function select(db: Db) {
 			tag: tags.name,
 			unit: tags.unit,
 			source: sources.name,
+			machine: machines.name,
+			point: sql<string | null>`${tags.row}->>'point'`,
+			detector: tags.detector,
+			contact: sql<string | null>`coalesce(nullif(${machines.data}->>'contact', ''), ${sources.contact}, ${tagSource.contact})`,
 			direction: alarms.direction,
 			kind: alarms.kind,
 			level: alarms.level,
@@ -52,11 +67,18 @@ function select(db: Db) {
 			isTest: alarms.isTest,
 			suppressedCount: alarms.suppressedCount,
 			shelvedUntil: tagStates.shelvedUntil,
+			shelvedBy: tagStates.shelvedBy,
+			shelvedNote: tagStates.shelvedNote,
+			outOfServiceUntil: tagStates.outOfServiceUntil,
+			outOfServiceBy: tagStates.outOfServiceBy,
+			outOfServiceNote: tagStates.outOfServiceNote,
 			limit: LIMIT_COLUMNS,
 		})
 		.from(alarms)
 		.leftJoin(tags, eq(tags.id, alarms.tagId))
 		.leftJoin(sources, eq(sources.id, alarms.sourceId))
+		.leftJoin(tagSource, eq(tagSource.id, tags.sourceId))
+		.leftJoin(machines, eq(machines.id, tags.machineId))
 		.leftJoin(limits, eq(limits.id, alarms.limitId))
 		.leftJoin(tagStates, eq(tagStates.tagId, alarms.tagId));
 }
@@ -85,6 +107,9 @@ export async function listAlarms(db: Db, filter: AlarmFilter): Promise<{ items: 
 						.where(and(eq(tags.siteId, filter.siteId), sql`lower(${tags.name}) = lower(${filter.tag})`)),
 				)
 			: undefined,
+		filter.level ? eq(alarms.level, filter.level) : undefined,
+		filter.machine ? sql`lower(${machines.name}) = lower(${filter.machine})` : undefined,
+		filter.search ? sql`strpos(lower(coalesce(${tags.name}, ${sources.name}, '')), lower(${filter.search})) > 0` : undefined,
 		filter.from === undefined ? undefined : gte(alarms.raisedAt, new Date(filter.from)),
 		filter.to === undefined ? undefined : lt(alarms.raisedAt, new Date(filter.to)),
 		filter.after

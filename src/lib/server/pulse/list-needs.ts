@@ -62,7 +62,7 @@ FROM alarms a JOIN tags t ON t.id = a.tag_id
 	LEFT JOIN tag_states ts ON ts.tag_id = a.tag_id
 	LEFT JOIN source_health h ON h.source_id = t.source_id
 WHERE a.site_id = $1 AND (a.cleared_at IS NULL OR a.acknowledged_at IS NULL) AND NOT a.is_late
-	AND coalesce(ts.shelved_until < now(), true) AND NOT coalesce(ts.out_of_service, false)
+	AND coalesce(ts.shelved_until < now(), true) AND coalesce(ts.out_of_service_until < now(), true)
 	AND (a.kind <> 'stale' OR (ts.suppressed_by IS NULL AND coalesce(h.state, 'ok') NOT IN ('lost', 'late')))
 ORDER BY a.raised_at DESC LIMIT 200`;
 

@@ -42,7 +42,7 @@ WITH source_figures AS (
 	FROM alarms a LEFT JOIN tag_states ts ON ts.tag_id = a.tag_id
 	WHERE a.site_id = $1 AND (a.cleared_at IS NULL OR a.acknowledged_at IS NULL)
 		AND NOT a.is_late
-		AND coalesce(ts.shelved_until < now(), true) AND NOT coalesce(ts.out_of_service, false)
+		AND coalesce(ts.shelved_until < now(), true) AND coalesce(ts.out_of_service_until < now(), true)
 		AND (ts.suppressed_by IS NULL OR a.kind <> 'stale')
 ), collector_figures AS (
 	SELECT coalesce(sum((stats->>'spool_readings')::float8), 0)::float8 AS spooled, coalesce(max((stats->>'spool_oldest_age_s')::float8), 0)::float8 AS spooled_for_s

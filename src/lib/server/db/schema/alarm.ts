@@ -83,7 +83,17 @@ export const alarmEvents = pgTable(
 			.references(() => alarms.id),
 		at: at('at').notNull(),
 		kind: text('kind', {
-			enum: ['raised', 'escalated', 'stepped-down', 'cleared', 'acknowledged', 'shelved', 'unshelved'],
+			enum: [
+				'raised',
+				'escalated',
+				'stepped-down',
+				'cleared',
+				'acknowledged',
+				'shelved',
+				'unshelved',
+				'out-of-service',
+				'returned-to-service',
+			],
 		}).notNull(),
 		level: text('level'),
 		value: doublePrecision('value'),
@@ -101,7 +111,10 @@ export const tagStates = pgTable('tag_states', {
 	shelvedUntil: at('shelved_until'),
 	shelvedBy: text('shelved_by'),
 	shelvedNote: text('shelved_note'),
-	outOfService: boolean('out_of_service').notNull().default(false),
+	/** Judged all the same; nobody is called, and what it raises is marked. */
+	outOfServiceUntil: at('out_of_service_until'),
+	outOfServiceBy: text('out_of_service_by'),
+	outOfServiceNote: text('out_of_service_note'),
 	/** Suppressed as a consequence of a lost source. */
 	suppressedBy: uuid('suppressed_by'),
 });

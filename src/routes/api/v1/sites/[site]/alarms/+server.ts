@@ -27,6 +27,7 @@ const COLUMNS: Columns<AlarmJson> = [
 	['id', (alarm) => alarm.id],
 	['tag', (alarm) => alarm.tag],
 	['source', (alarm) => alarm.source],
+	['machine', (alarm) => alarm.machine],
 	['direction', (alarm) => alarm.direction],
 	['kind', (alarm) => alarm.kind],
 	['level', (alarm) => alarm.level],
@@ -50,6 +51,9 @@ export const GET = api(
 		query: z.strictObject({
 			state: states.optional(),
 			tag: z.string().min(1).max(120).optional(),
+			level: z.enum(['alert', 'danger']).optional(),
+			machine: z.string().min(1).max(120).optional(),
+			search: z.string().min(1).max(120).optional(),
 			from: timeParam.optional(),
 			to: timeParam.optional(),
 			after: cursor.optional(),

@@ -1,0 +1,1 @@
+ALTER TABLE "tag_states" DROP COLUMN "out_of_service";
