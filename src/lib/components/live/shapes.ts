@@ -61,6 +61,17 @@ export interface AlarmJson {
 	suppressed?: number;
 	uncertain?: boolean;
 	note?: string | null;
+	acknowledge_note?: string | null;
+	machine?: string | null;
+	point?: string | null;
+	detector?: string | null;
+	contact?: string | null;
+	shelved_until?: string | null;
+	shelved_by?: string | null;
+	shelved_note?: string | null;
+	out_of_service_until?: string | null;
+	out_of_service_by?: string | null;
+	out_of_service_note?: string | null;
 }
 export interface AdviceJson {
 	code: string;
