@@ -94,7 +94,7 @@ async function answers(url: string): Promise<boolean> {
 export function prepareCluster(
 	dataFolder: string,
 	port: number,
-): { addresses: ClusterAddresses; run(): ChildProcess; isRunning(): boolean; stopStray(): void } {
+): { addresses: ClusterAddresses; folder: string; run(): ChildProcess; isRunning(): boolean; stopStray(): void } {
 	const bin = findPostgres();
 	if (!bin)
 		throw new Refusal('PostgreSQL is not installed: apt-get install postgresql, or set DATABASE_URL to a database of your own.');
@@ -182,6 +182,7 @@ export function prepareCluster(
 	};
 	return {
 		addresses: addressesOf(secrets, port),
+		folder,
 		isRunning: () => postmaster() !== null,
 		// Left behind by a start that was killed: end it in order, so that this start has its own child.
 		stopStray: () => {

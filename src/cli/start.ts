@@ -130,6 +130,7 @@ export async function start({ demo, build }: StartOptions): Promise<void> {
 		await requireFree(config.host, config.port, 'the web pages', 'PORT');
 		let databaseUrl = config.databaseUrl;
 		let ownerUrl = config.databaseUrl;
+		let databaseFolder: string | undefined;
 		if (databaseUrl) {
 			await requireDatabase(databaseUrl);
 		} else {
@@ -140,6 +141,7 @@ export async function start({ demo, build }: StartOptions): Promise<void> {
 			remember();
 			await prepareDatabase(cluster.addresses, config.dataFolder);
 			({ app: databaseUrl, owner: ownerUrl } = cluster.addresses);
+			databaseFolder = cluster.folder;
 		}
 		await migrateDatabase(ownerUrl ?? databaseUrl, 'drizzle');
 
@@ -168,6 +170,7 @@ export async function start({ demo, build }: StartOptions): Promise<void> {
 			...process.env,
 			NODE_ENV: build === null ? 'development' : 'production',
 			DATABASE_URL: databaseUrl,
+			...(databaseFolder ? { MILLRACE_PG_FOLDER: databaseFolder } : {}),
 			MILLRACE_DATA: config.dataFolder,
 			MILLRACE_DEMO: withSimulators || held === 'demo' ? '1' : '0',
 			PORT: String(config.port),

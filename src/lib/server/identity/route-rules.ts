@@ -36,6 +36,7 @@ export const ROUTE_RULES: Readonly<Record<string, RouteRule>> = {
 	'/(app)/[site]/audit': at('audit:read'),
 	'/(app)/admin/people': at('people:edit'),
 	'/(app)/admin/mails': at('mail:edit'),
+	'/(app)/admin/store': at('store:edit'),
 
 	'/healthz': 'public',
 	'/readyz': 'public',
