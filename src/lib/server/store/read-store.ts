@@ -63,9 +63,12 @@ export async function readStore(pool: Pool, now: number): Promise<StoreReport> {
 	const inBlocks = packed.reduce((sum, one) => sum + one.readings, 0);
 	const bytesPerPacked = inBlocks >= 1_000 ? packed.reduce((sum, one) => sum + one.bytes, 0) / inBlocks : null;
 
+	const oldestDay = oldestOf(size);
+	// A month's or week's table may begin before its first row.
 	const held = (kind: keyof StoreSize['since']) => {
 		const since = size.since[kind];
-		return since === null ? 0 : Math.max(0, (now - since) / DAY_MS);
+		const begin = Math.max(since ?? 0, kind === 'journal' || oldestDay === null ? 0 : Date.parse(oldestDay));
+		return since === null ? 0 : Math.max(0, (now - begin) / DAY_MS);
 	};
 	const perDay = (kind: 'minute' | 'hour' | 'journal', most: number) =>
 		held(kind) < 0.25 ? 0 : size.bytes[kind] / Math.min(held(kind), most);
@@ -122,7 +125,7 @@ export async function readStore(pool: Pool, now: number): Promise<StoreReport> {
 		readingsPerDay,
 		bytesPerRow,
 		bytesPerPacked,
-		oldestDay: oldestOf(size),
+		oldestDay,
 		newestDay: size.rowDays.at(-1)?.day ?? size.packedDays[0]?.day ?? null,
 		daysDue: size.rowDays.filter(({ day }) => day < rowEdge).length,
 		size,

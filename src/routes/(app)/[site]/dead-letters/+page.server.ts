@@ -9,7 +9,7 @@ export const load: PageServerLoad = async ({ locals, params, url, depends }) => 
 	const reason = url.searchParams.get('reason') ?? undefined;
 	const [reasons, page] = await Promise.all([
 		countLetters(webPool(), site.id),
-		listLetters(webPool(), { siteId: site.id, reason, limit: 200 }),
+		listLetters(webPool(), { siteId: site.id, reason, limit: 100 }),
 	]);
 	return { title: 'Readings set aside', reason: reason ?? null, reasons, letters: page.items, hasMore: page.next !== null };
 };
