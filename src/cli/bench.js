@@ -2,6 +2,8 @@
 import { allowTypeScript, ensureNodePackages, requireNode, runMain } from './bootstrap.js';
 
 await runMain(async () => {
+	// The lines of a benchmark stand alone on standard output.
+	process.env.MILLRACE_LOG ??= 'silent';
 	requireNode();
 	ensureNodePackages();
 	await allowTypeScript();

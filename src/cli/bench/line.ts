@@ -7,6 +7,8 @@ export interface BenchLine {
 	ratio: number;
 	unit: string;
 	note: string;
+	/** CPU seconds for the same work, ours to the reference. */
+	cpu_ratio?: number;
 }
 
 export function median(numbers: readonly number[]): number {

@@ -91,6 +91,8 @@ class Poller implements SourceLink {
 	/** Most registers a read; less than the setting once the device has refused as many. */
 	#most: number;
 	#exceptionAdvice: Advice | null = null;
+	/** The last answer, not handed on yet. */
+	#answered: { block: ReadBlock; bytes: Uint8Array; receivedAt: number; ms: number } | null = null;
 
 	constructor(settings: ModbusSettings, context: SourceContext, link: ModbusLink, emit: Emit, signal: AbortSignal) {
 		this.#settings = settings;
@@ -219,6 +221,8 @@ class Poller implements SourceLink {
 	}
 
 	#sleep(ms: number): Promise<void> {
+		// A timer takes a whole millisecond at least, which a device that is asked without a pause would notice.
+		if (ms < 0.5) return new Promise((resolve) => setImmediate(resolve));
 		return new Promise((resolve) => {
 			const timer = setTimeout(done, Math.max(0, ms));
 			function done() {
@@ -237,6 +241,14 @@ class Poller implements SourceLink {
 			await this.#readBlock(block);
 		}
 		await this.#probeHoles(new Set(intervals));
+		await this.#handAnswered();
+	}
+
+	/** Hands on the block that was answered last. */
+	async #handAnswered(): Promise<void> {
+		const answered = this.#answered;
+		this.#answered = null;
+		if (answered) await this.#hand(samplesOf(answered.block, answered.bytes, answered.receivedAt, answered.ms));
 	}
 
 	#blocksOf(intervals: readonly number[]): ReadBlock[] {
@@ -258,14 +270,19 @@ class Poller implements SourceLink {
 		if (!this.#link.isOpen) await this.#reconnect();
 		if (this.#signal.aborted) return;
 		const { observer } = this.#context;
-		const outcome = await this.#link.read(block.unitId, block.table, block.start, block.count);
-		const receivedAt = this.#context.now();
+		const reading = this.#link.read(block.unitId, block.table, block.start, block.count).then((outcome) => ({
+			outcome,
+			receivedAt: this.#context.now(),
+		}));
+		// The answer before this one is cut up while the device works on the next: its time is not ours to waste.
+		await this.#handAnswered();
+		const { outcome, receivedAt } = await reading;
 		observer.request(outcome.kind === 'answer', outcome.ms);
 		switch (outcome.kind) {
 			case 'answer':
 				if (this.#breaker.answered(block.unitId)) observer.event('note', 'unit-back', `unit ${block.unitId} answers again`);
 				if (this.#holes.every((hole) => hole.isGap)) this.#exceptionAdvice = null;
-				await this.#hand(samplesOf(block, outcome.bytes, receivedAt, outcome.ms));
+				this.#answered = { block, bytes: outcome.bytes, receivedAt, ms: outcome.ms };
 				return;
 			case 'exception':
 				await this.#refused(block, outcome.code, receivedAt);
@@ -474,18 +491,33 @@ class Poller implements SourceLink {
 	}
 }
 
+/** Where each address of a block lies in its answer: bits by number, registers by byte; worked out once a plan. */
+const cuts = new WeakMap<ReadBlock, { from: number; to: number }[]>();
+
+function cutsOf(block: ReadBlock): { from: number; to: number }[] {
+	const known = cuts.get(block);
+	if (known) return known;
+	const made = block.items.map(({ address }) => {
+		const offset = address.register - block.start;
+		return isBitTable(block.table) ? { from: offset, to: offset + 1 } : { from: offset * 2, to: (offset + widthOf(address)) * 2 };
+	});
+	cuts.set(block, made);
+	return made;
+}
+
 /** Cuts a block's answer into its addresses' own bytes. */
 function samplesOf(block: ReadBlock, bytes: Uint8Array, receivedAt: number, latencyMs: number): Sample[] {
 	const isBits = isBitTable(block.table);
-	return block.items.map(({ key, address }) => {
-		const offset = address.register - block.start;
+	const places = cutsOf(block);
+	return block.items.map(({ key }, index) => {
+		const { from, to } = places[index] ?? { from: 0, to: 0 };
 		return {
 			key,
 			receivedAt,
 			sourceAt: null,
 			raw: isBits
-				? { kind: 'bit', value: (((bytes[offset >> 3] ?? 0) >> (offset & 7)) & 1) === 1 }
-				: { kind: 'registers', bytes: bytes.subarray(offset * 2, (offset + widthOf(address)) * 2) },
+				? { kind: 'bit', value: (((bytes[from >> 3] ?? 0) >> (from & 7)) & 1) === 1 }
+				: { kind: 'registers', bytes: new Uint8Array(bytes.buffer, bytes.byteOffset + from, to - from) },
 			sourceQuality: null,
 			fault: null,
 			latencyMs,
