@@ -11,7 +11,13 @@ const PROTOCOL_PACKAGES = ['node-opcua', 'modbus-serial', 'mqtt', 'aedes', 'node
 const DATABASE_PACKAGES = ['pg', 'pg-copy-streams', 'drizzle-orm', 'libsql'];
 
 /** Folders whose files are pure whatever their first line says. */
-const PURE_FOLDERS = ['src/lib/domain/', 'src/lib/pipeline/decode/', 'src/lib/pipeline/normalize/', 'src/lib/pipeline/evaluate/', 'src/lib/pipeline/aggregate/'];
+const PURE_FOLDERS = [
+	'src/lib/domain/',
+	'src/lib/pipeline/decode/',
+	'src/lib/pipeline/normalize/',
+	'src/lib/pipeline/evaluate/',
+	'src/lib/pipeline/aggregate/',
+];
 
 interface FolderRule {
 	folder: string;
