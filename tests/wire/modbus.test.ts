@@ -1,7 +1,7 @@
 import { execFile } from 'node:child_process';
 import { existsSync } from 'node:fs';
 import { createConnection } from 'node:net';
-import { afterEach, describe, expect, it } from 'vitest';
+import { afterEach, describe, expect, it, vi } from 'vitest';
 import { modbusSettings, type ModbusSettings } from '#lib/domain/source-settings.ts';
 import type { ModbusAddress } from '#lib/domain/tag-map/address.ts';
 import { bytesToHex, decodeRegisters } from '#lib/pipeline/decode/registers.ts';
@@ -212,6 +212,51 @@ describe('a device that misbehaves', () => {
 		await until(() => samples.length >= 20);
 		expect(samples.every((sample) => sample.fault === null)).toBe(true);
 		expect(made.log.filter((one) => one.start <= 5 && 5 < one.start + one.count)).toHaveLength(1);
+	});
+
+	it('a part that timed out is no sign of a gap: once all is well again, one read takes it all', async () => {
+		const made = await device();
+		made.behaviour.exceptions = [{ unitId: 1, from: 5, to: 6, code: 2 }];
+		// Request 1 is refused as a whole, request 2 is its lower half: it gets no answer, the upper half does.
+		made.behaviour.hold = { request: 2, until: 1_000_000 };
+		const { samples } = await open(made.port, wanted([at(3), at(7)], 400));
+		await until(() => samples.length >= 2);
+		made.behaviour.exceptions = [];
+		const before = made.requests;
+		await until(() => made.requests >= before + 4);
+		expect(samples[0]).toMatchObject({ key: 1, fault: { code: 'no-answer' } });
+		expect(made.log.slice(-2).map((one) => `${one.start}+${one.count}`)).toEqual(['3+5', '3+5']);
+	});
+
+	it('a refused register that is asked again and gets no answer says so, like any other read', async () => {
+		const real = performance.now.bind(performance);
+		let aheadMs = 0;
+		const clock = vi.spyOn(performance, 'now').mockImplementation(() => real() + aheadMs);
+		running.push(async () => clock.mockRestore());
+		const made = await device();
+		made.behaviour.exceptions = [{ unitId: 2, from: 5, to: 6, code: 2 }];
+		const { samples, events, link } = await open(
+			made.port,
+			[1, 2].map((unitId) => ({ key: unitId, address: at(5, { unitId }), intervalMs: 50 })),
+		);
+		const ofTwo = () => samples.filter((sample) => sample.key === 2).map((sample) => sample.fault?.code ?? valueOf(sample));
+		await until(() => ofTwo().length === 1);
+		made.behaviour.silent.add(2);
+		for (const times of [2, 3]) {
+			aheadMs += 61_000;
+			await until(() => ofTwo().length === times);
+		}
+		expect(ofTwo()).toEqual(['exception', 'no-answer', 'no-answer']);
+		// Two time-outs in a row: the unit counts as silent.
+		expect(events).toContain('unit-silent');
+		expect(link.advice).toMatchObject({ code: 'unit-silent' });
+		made.behaviour.silent.clear();
+		made.behaviour.exceptions = [];
+		aheadMs += 61_000;
+		await until(() => ofTwo().length >= 5);
+		expect(ofTwo().slice(3, 5)).toEqual([2_005, 2_005]);
+		expect(events).toEqual(expect.arrayContaining(['unit-back', 'address-back']));
+		expect(link.advice).toBeNull();
 	});
 
 	it('a gateway that says a unit does not answer is asked rarely for that unit, the others go on', async () => {
