@@ -24,10 +24,32 @@ export function machineWords(machine: Pick<MachineJson, 'description' | 'data'>)
 	return [machine.description, what, zone, pump].filter(Boolean).join(' · ');
 }
 
-/** Which driven part the picture shows. */
-export function drivenKind(data: Record<string, unknown>): 'pump' | 'fan' | 'roll' {
+/** Which driven part the picture shows; null for what has no rotor and so no picture. */
+export function drivenKind(data: Record<string, unknown>): 'pump' | 'fan' | 'roll' | null {
 	const kind = (text(data, 'kind') ?? '').toLowerCase();
+	if (/trap|valve|tank|vessel/.test(kind)) return null;
+	// A fan pump is a pump: it feeds the machine it is named after.
+	if (/pump/.test(kind)) return 'pump';
 	if (/fan|blower/.test(kind)) return 'fan';
 	if (/roll|refiner/.test(kind)) return 'roll';
 	return 'pump';
+}
+
+/** Shapes that a picture can draw, by the `kind` of a machine's data. */
+export const SHAPES: readonly { value: string; label: string }[] = [
+	{ value: 'pump-set', label: 'motor and pump' },
+	{ value: 'fan-pump', label: 'motor and fan pump' },
+	{ value: 'fan', label: 'motor and fan' },
+	{ value: 'blower', label: 'motor and blower' },
+	{ value: 'refiner', label: 'motor and refiner' },
+	{ value: 'felt-roll', label: 'driven roll' },
+	{ value: 'steam-trap', label: 'steam trap, no rotor' },
+];
+
+/** A number typed into a form: null for nothing, undefined for what is no number. Takes a decimal comma. */
+export function numberOrNull(typed: string): number | null | undefined {
+	const clean = typed.trim().replace(',', '.');
+	if (clean === '') return null;
+	const value = Number(clean);
+	return Number.isFinite(value) && value >= 0 ? value : undefined;
 }

@@ -77,6 +77,27 @@ export async function returnToService(pool: Pool, input: By): Promise<Outcome<In
 	});
 }
 
+export interface OutOfService {
+	/** RFC 3339; the latest end of its tags. */
+	until: string;
+	by: string | null;
+	note: string | null;
+	/** How many of the machine's tags are out of service. */
+	tags: number;
+}
+
+/** What of a machine is out of service now; null where nothing is. */
+export async function findOutOfService(db: Db, machineId: number): Promise<OutOfService | null> {
+	const rows = await db
+		.select({ until: tagStates.outOfServiceUntil, by: tagStates.outOfServiceBy, note: tagStates.outOfServiceNote })
+		.from(tagStates)
+		.innerJoin(tags, eq(tags.id, tagStates.tagId))
+		.where(and(eq(tags.machineId, machineId), isNull(tags.retiredAt), gt(tagStates.outOfServiceUntil, new Date())))
+		.orderBy(sql`${tagStates.outOfServiceUntil} desc`);
+	const [last] = rows;
+	return last?.until ? { until: last.until.toISOString(), by: last.by, note: last.note, tags: rows.length } : null;
+}
+
 interface Subject {
 	kind: 'tag' | 'machine';
 	id: number;
