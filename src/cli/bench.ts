@@ -17,6 +17,8 @@ import { createPool, type Pool } from '#lib/server/db/pool.ts';
 import { migrateDatabase } from '#lib/server/db/migrate.ts';
 import { createBenchCluster } from './bench-cluster.ts';
 import { benchLine, type BenchLine } from './bench/line.ts';
+import { benchFreshness } from './bench/freshness.ts';
+import { benchOpcua } from './bench/opcua.ts';
 import { benchModbus } from './bench/modbus.ts';
 import { benchMqtt } from './bench/mqtt.ts';
 import { benchPages } from './bench/pages.ts';
@@ -162,15 +164,16 @@ async function feed(pool: Pool, url: string, siteId: number): Promise<BenchLine>
 }
 
 const asked = process.argv.slice(2);
-const KNOWN = ['ingest', 'feed', 'trend-growth', 'modbus', 'mqtt', 'pages'];
+const KNOWN = ['ingest', 'feed', 'trend-growth', 'modbus', 'opcua', 'mqtt', 'freshness', 'pages'];
 for (const name of asked)
 	if (!KNOWN.includes(name)) throw new Refusal(`No benchmark is named "${name}". Known: ${KNOWN.join(', ')}.`);
 
 const wants = (name: string) => asked.length === 0 || asked.includes(name);
 const print = (line: BenchLine) => console.log(JSON.stringify(line));
 
-if (['ingest', 'feed', 'trend-growth', 'mqtt'].some(wants)) await storeBenches();
+if (['ingest', 'feed', 'trend-growth', 'mqtt', 'freshness'].some(wants)) await storeBenches();
 if (wants('modbus')) print(await benchModbus());
+if (wants('opcua')) print(await benchOpcua());
 if (wants('pages')) (await benchPages()).forEach(print);
 
 async function storeBenches(): Promise<void> {
@@ -191,6 +194,7 @@ async function storeBenches(): Promise<void> {
 		if (wants('ingest') && ingested) print(ingested);
 		if (wants('feed')) print(await feed(pool, cluster.url, siteId));
 		if (wants('mqtt')) print(await benchMqtt(pool, siteId, tagIds.slice(0, 100)));
+		if (wants('freshness')) print(await benchFreshness(pool, siteId));
 		await pool.end();
 	} finally {
 		await cluster.remove();

@@ -7,7 +7,7 @@ import { join } from 'node:path';
 import { connect as openSocket } from 'node:net';
 import { connectAsync } from 'mqtt';
 import { mqttSettings } from '#lib/domain/source-settings.ts';
-import type { TagPlan } from '#lib/domain/tag-map/tag-plan.ts';
+import type { Address } from '#lib/domain/tag-map/address.ts';
 import { Pipeline } from '#lib/pipeline/pipeline.ts';
 import { createMqttSource } from '#lib/pipeline/sources/mqtt/mqtt-source.ts';
 import { createCopyWriter } from '#lib/pipeline/store/copy-writer.ts';
@@ -15,45 +15,21 @@ import type { Pool } from '#lib/server/db/pool.ts';
 import { findFreePort } from '../throwaway-product.ts';
 import { benchLine, type BenchLine } from './line.ts';
 import { startPeer } from './peer.ts';
+import { barePlan } from './plan.ts';
 
 const ROUNDS = 5;
 const MESSAGES = 60_000;
 const MOST_MS = 60_000;
 
-/** A tag plan that takes a payload that is a number. */
-function planOf(siteId: number, tagId: number, topic: string): TagPlan {
-	return {
-		tagId,
-		tag: topic,
-		siteId,
-		sourceId: 'bench',
-		revision: 1,
-		address: { kind: 'mqtt', topic, valuePointer: null, timePointer: null, qualityPointer: null, timeFormat: 'auto' },
-		intervalMs: 1_000,
-		scale: 1,
-		offset: 0,
-		rawUnit: 'mm/s',
-		rawDetector: 'rms',
-		unit: 'mm/s',
-		detector: 'rms',
-		frequencyHz: null,
-		conversion: { factor: 1, offset: 0 },
-		lowRange: null,
-		highRange: null,
-		deadband: null,
-		expectedEveryS: null,
-		staleAfterS: 60,
-		frozenAfterS: null,
-		timeTagId: null,
-		ageTagId: null,
-		validTagId: null,
-		validWhen: null,
-		sentinels: [],
-		states: null,
-		timePolicy: 'source',
-		limits: [],
-	};
-}
+/** A payload that is a number. */
+const addressOf = (topic: string): Address => ({
+	kind: 'mqtt',
+	topic,
+	valuePointer: null,
+	timePointer: null,
+	qualityPointer: null,
+	timeFormat: 'auto',
+});
 
 /** Ours: published to committed. Reference: published to counted. */
 export async function benchMqtt(pool: Pool, siteId: number, tagIds: readonly number[]): Promise<BenchLine> {
@@ -123,7 +99,7 @@ async function throughStore(
 	const writer = createCopyWriter(pool, { now: Date.now });
 	const pipeline = new Pipeline(writer, Date.now);
 	for (const [n, tagId] of tagIds.entries())
-		pipeline.setTag(planOf(siteId, tagId, `bench/${n}`), { judging: null, latest: null });
+		pipeline.setTag(barePlan(siteId, tagId, addressOf(`bench/${n}`)), { judging: null, latest: null });
 	const stop = new AbortController();
 	const source = createMqttSource(mqttSettings.parse({ url: `mqtt://127.0.0.1:${port}` }), {
 		sourceId: `bench-${Math.random().toString(36).slice(2)}`,
@@ -133,9 +109,7 @@ async function throughStore(
 		now: Date.now,
 	});
 	const link = await source.open((samples) => pipeline.accept(samples), stop.signal);
-	await link.setAddresses(
-		tagIds.map((tagId, n) => ({ key: tagId, intervalMs: 1_000, address: planOf(siteId, tagId, `bench/${n}`).address })),
-	);
+	await link.setAddresses(tagIds.map((tagId, n) => ({ key: tagId, intervalMs: 1_000, address: addressOf(`bench/${n}`) })));
 	await new Promise((resolve) => setTimeout(resolve, 500));
 	publish();
 	const rate = await rateOf(() => pipeline.counts.stored + pipeline.counts.duplicates);
