@@ -3,7 +3,19 @@ import { readFileSync } from 'node:fs';
 import { enterAs, watchErrors } from './support.ts';
 
 const AXE = readFileSync('node_modules/axe-core/axe.min.js', 'utf8');
-const PAGES = ['', '/sources', '/tag-map', '/machines', '/alarms', '/limits', '/tags/HL-3.MDE.H.VEL', '/keys', '/audit'];
+const PAGES = [
+	'',
+	'/sources',
+	'/tag-map',
+	'/machines',
+	'/machines/3',
+	'/alarms',
+	'/alarms?state=all',
+	'/limits',
+	'/tags/HL-3.MDE.H.VEL',
+	'/keys',
+	'/audit',
+];
 const SIZES = [
 	{ width: 1_366, height: 768 },
 	{ width: 390, height: 844 },
