@@ -210,11 +210,20 @@ describe('a server that restarts', () => {
 	}, 30_000);
 
 	it('a namespace that the server does not know is said, not guessed', async () => {
-		const { samples } = await open([
+		const { samples, link } = await open([
 			{ key: 1, address: { kind: 'opcua', nodeId: 'nsu=urn:nowhere;s=V0', indexRange: null }, intervalMs: 100 },
 		]);
 		await until(() => samples.length >= 1);
 		expect(samples[0]?.fault).toMatchObject({ code: 'namespace-missing' });
+		expect(link.advice?.code).toBe('namespace-missing');
+		expect(link.advice?.text).toContain('urn:nowhere');
+	});
+
+	it('a folder mapped as if it were a value gets advice of its own', async () => {
+		const { samples, link } = await open(wanted(['Gateway', 'V0', 'V1']));
+		await until(() => samples.length >= 3);
+		expect(link.advice).toMatchObject({ code: 'nodes-without-value' });
+		expect(link.advice?.text).toMatch(/^1 of 3 nodes /);
 	});
 });
 
