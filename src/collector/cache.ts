@@ -2,7 +2,15 @@
 import { deserialize, serialize } from 'node:v8';
 import { deflateSync, inflateSync } from 'node:zlib';
 import type { JudgingState } from '#lib/pipeline/evaluate/judging-state.ts';
-import { atOnce, isBroken, LocalFileBusy, openLocalFile, putAside, type LocalDatabase } from '#lib/pipeline/store/local-file.ts';
+import {
+	atOnce,
+	closeLocalFile,
+	isBroken,
+	LocalFileBusy,
+	openLocalFile,
+	putAside,
+	type LocalDatabase,
+} from '#lib/pipeline/store/local-file.ts';
 import type { LatestUpdate } from '#lib/pipeline/store/write-batch.ts';
 import type { TagMemory, TagRuntime } from '#lib/pipeline/tag-runtime.ts';
 import { log } from '#lib/server/log.ts';
@@ -41,7 +49,7 @@ export class CollectorCache {
 		} catch (error) {
 			if (error instanceof LocalFileBusy) throw error;
 			this.problem = (error as Error).message;
-			this.#db?.close();
+			if (this.#db) closeLocalFile(this.#db);
 			this.#db = null;
 			if (!isBroken(error)) {
 				this.#failed(error);
@@ -104,7 +112,7 @@ export class CollectorCache {
 	}
 
 	close(): void {
-		this.#db?.close();
+		if (this.#db) closeLocalFile(this.#db);
 		this.#db = null;
 	}
 

@@ -195,6 +195,7 @@ export class Supervisor {
 			await this.#options.prepare?.();
 			const plans = await loadPlans(pool, held);
 			await this.#apply(plans);
+			this.#countUnsampled(held);
 			this.#fingerprint = fingerprint;
 		}
 		await answerRequests(pool, this.runs);
@@ -226,14 +227,14 @@ export class Supervisor {
 			'plans',
 			[...this.runs.values()].map((run) => run.plan),
 		);
-		this.#countUnsampled();
 	}
 
 	/** What sources that were held all the time should have given while nothing was sampled, by their tags' intervals. */
-	#countUnsampled(): void {
+	#countUnsampled(loaded: readonly string[]): void {
 		const { pipeline, now } = this.#options;
 		const unsampled = this.#unsampled;
-		if (!unsampled?.held) return;
+		// A round that began before the leases were won has not loaded them.
+		if (!unsampled?.held?.every((id) => loaded.includes(id))) return;
 		this.#unsampled = null;
 		const ms = now() - unsampled.since;
 		for (const id of unsampled.held) {

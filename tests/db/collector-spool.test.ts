@@ -184,6 +184,107 @@ describe('while PostgreSQL is away a collector with a spool', () => {
 	});
 });
 
+describe('what an earlier run left in the spool', () => {
+	it('is stored though another collector runs the source by now; its alarms are recorded as found afterwards', async () => {
+		const { site, device, sourceId, tagId } = await layStand();
+		await site.limit({ tag: 'steady', kind: 'high', level: 'alert', value: 5, raise_after_s: 0, clear_after_s: 0 });
+		const data = dataFolder();
+		const first = await site.start('one', { folder: data });
+		await until('it runs with its limit', () => device.isConnected && first.pipeline.tags.get(tagId)?.plan.limits.length === 1);
+		const base = Date.now() - 60_000;
+		await device.send(sampleOf(tagId, 1, base));
+		cluster.stop('fast');
+		for (const [n, value] of [9, 8, 2].entries()) await device.send(sampleOf(tagId, value, base + 1_000 + n * 1_000));
+		await first.stop();
+		cluster.start();
+		await site.pool.query(
+			"UPDATE source_leases SET owner = gen_random_uuid(), instance = 'another', token = token + 1, until = clock_timestamp() + interval '5 minutes' WHERE source_id = $1",
+			[sourceId],
+		);
+		const next = await site.start('one', { folder: data });
+		await until('all is stored', async () => (await site.values(tagId)).length === 4);
+		expect(await site.values(tagId)).toEqual([1, 9, 8, 2]);
+		expect(device.standing).toBe(0);
+		const alarms = await site.pool.query<{ is_late: boolean; raised_at: Date; cleared_at: Date }>(
+			'SELECT is_late, raised_at, cleared_at FROM alarms WHERE tag_id = $1',
+			[tagId],
+		);
+		// Began with the first value beyond the limit and ended with the first that was not.
+		expect(
+			alarms.rows.map((alarm) => [alarm.is_late, alarm.raised_at.getTime() - base, alarm.cleared_at.getTime() - base]),
+		).toEqual([[true, 1_000, 3_000]]);
+		const judged = await site.pool.query<{ at: number }>(
+			"SELECT (state->>'lastAt')::float8 AS at FROM judging_states WHERE tag_id = $1",
+			[tagId],
+		);
+		expect(judged.rows[0]?.at).toBe(base);
+		await next.stop();
+		await site.end();
+	});
+
+	it('is put aside and counted as lost where the file cannot be read: sent is stored and told', async () => {
+		const stand = await layStand();
+		const { site, device, tagId } = stand;
+		const data = dataFolder();
+		const first = await site.start('one', { folder: data });
+		await until('it runs', () => device.isConnected);
+		await device.send(sampleOf(tagId, 0));
+		cluster.stop('fast');
+		const base = Date.now();
+		await device.send(...numbers(120).map((n) => sampleOf(tagId, n, base + n)));
+		await first.stop();
+		cluster.start();
+		writeFileSync(join(data, 'spool.db'), 'spoiled'.repeat(2_000));
+		const next = await site.start('one', { folder: data });
+		const told = await until('the loss is told', async () => {
+			const losses = await toldLosses(stand);
+			return losses.length > 0 ? losses : null;
+		});
+		expect(told).toEqual([{ code: 'lost-spool-broken', count: 120 }]);
+		expect(await site.values(tagId)).toEqual([0]);
+		expect(readdirSync(data).filter((name) => name.startsWith('spool.db.broken-'))).toHaveLength(1);
+		await until('it runs again', () => device.isConnected);
+		await device.send(sampleOf(tagId, 500));
+		expect(await site.values(tagId)).toEqual([0, 500]);
+		await next.stop();
+		await site.end();
+	});
+});
+
+describe('a stale alarm that is held back for a lost source', () => {
+	it('is raised after a restart of the collector when the source comes back without the tag', async () => {
+		const { site, device, tagId } = await layStand();
+		const tags = await site.publish('press line', { tag: 'first', stale_after_s: 1 }, { tag: 'steady', stale_after_s: 1 });
+		const other = tags.first ?? 0;
+		await site.limit({ tag: 'steady', kind: 'stale', level: 'alert' });
+		const first = await site.start('one');
+		await until('it runs with its limit', () => device.isConnected && first.pipeline.tags.get(tagId)?.plan.limits.length === 1);
+		await device.send(sampleOf(tagId, 1), sampleOf(other, 1));
+		device.lose();
+		await until('the silence is judged and held back', async () => {
+			const held = await site.pool.query("SELECT FROM judging_states WHERE tag_id = $1 AND state ? 'heldBack'", [tagId]);
+			return held.rowCount === 1;
+		});
+		await first.stop();
+		expect(await site.alarms(tagId)).toEqual([]);
+		device.recover();
+		const next = await site.start('one');
+		await until('it runs again', () => device.isConnected);
+		const again = setInterval(() => device.isConnected && void device.send(sampleOf(other, Math.random())), 200);
+		try {
+			const alarms = await until('its stale alarm', async () => {
+				const found = await site.alarms(tagId);
+				return found.length > 0 && found;
+			});
+			expect(alarms).toMatchObject([{ direction: 'stale', cleared_at: null }]);
+		} finally {
+			clearInterval(again);
+		}
+		await next.stop();
+		await site.end();
+	});
+});
+
 describe('a collector that is killed while PostgreSQL is away', () => {
 	let broker: Aedes;
 	let server: Server;

@@ -61,8 +61,8 @@ async function deliverChanges(spool: Spool, options: DrainOptions): Promise<bool
 	// In order within the two kinds; an alarm of a tag and one of a connection never concern each other.
 	await deliver(options, {
 		...EMPTY_BATCH,
-		alarmChanges: found.flatMap(({ change }) => (change?.kind === 'alarm' ? [change.change] : [])),
-		connections: found.flatMap(({ change }) => (change?.kind === 'connection' ? [change.change] : [])),
+		alarmChanges: found.flatMap(({ change }) => (change.kind === 'alarm' ? [change.change] : [])),
+		connections: found.flatMap(({ change }) => (change.kind === 'connection' ? [change.change] : [])),
 	});
 	return spool.changesDelivered(last.seq);
 }

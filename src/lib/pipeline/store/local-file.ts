@@ -50,11 +50,27 @@ export function openLocalFile(path: string, version: number, schema: string): Lo
 		}
 		return db;
 	} catch (error) {
-		db.close();
+		if (codeOf(error).startsWith('SQLITE_BUSY')) db.close();
+		else closeLocalFile(db);
 		if (codeOf(error).startsWith('SQLITE_BUSY'))
 			throw new LocalFileBusy(`${path} is in use: another collector of this name runs on this data folder`);
 		throw error;
 	}
+}
+
+/**
+ * Ends the use of a file. Statements that nobody uses any more keep its handle until they are collected, so the lock is given back first:
+ * the same process may open the file again.
+ */
+export function closeLocalFile(db: LocalDatabase): void {
+	try {
+		db.pragma('journal_mode = DELETE');
+		db.pragma('locking_mode = NORMAL');
+		db.prepare('SELECT count(*) FROM sqlite_master').get();
+	} catch (error) {
+		log.debug({ error: (error as Error).message }, 'a file of the data folder was closed as it is');
+	}
+	db.close();
 }
 
 /** The number that a pragma answers. */

@@ -2,7 +2,16 @@
 import { existsSync, readFileSync, statfsSync, statSync, writeFileSync } from 'node:fs';
 import { dirname } from 'node:path';
 import { log } from '#lib/server/log.ts';
-import { atOnce, isBroken, LocalFileBusy, numberOf, openLocalFile, putAside, type LocalDatabase } from './local-file.ts';
+import {
+	atOnce,
+	closeLocalFile,
+	isBroken,
+	LocalFileBusy,
+	numberOf,
+	openLocalFile,
+	putAside,
+	type LocalDatabase,
+} from './local-file.ts';
 import { SPOOL_SCHEMA, SPOOL_VERSION } from './spool-rows.ts';
 
 const REOPEN_MS = 10_000;
@@ -133,7 +142,7 @@ export class SpoolFile {
 	}
 
 	#shut(): void {
-		this.#db?.close();
+		if (this.#db) closeLocalFile(this.#db);
 		this.#db = null;
 	}
 

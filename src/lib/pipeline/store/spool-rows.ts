@@ -34,10 +34,19 @@ export interface SpooledTag {
 }
 
 /**
- * What a change is worth once another collector has run its source meanwhile: an excursion that began is recorded closed, as found afterwards,
- * and nobody is called; everything else is that collector's to say. Null where nothing is left.
+ * What changes of alarms are worth once another collector has run their source meanwhile: an excursion that began here is recorded closed, as found
+ * afterwards, from its beginning to its end as far as either is known here, and nobody is called. Everything else is that collector's to say.
  */
-export function asFoundAfterwards(change: SpooledChange): SpooledChange | null {
-	if (change.kind !== 'alarm' || change.change.kind !== 'raised' || change.change.isTest) return null;
-	return { kind: 'alarm', change: { ...change.change, isLate: true } };
+export function asFoundAfterwards(changes: readonly TagAlarmChange[]): TagAlarmChange[] {
+	const found = new Map<string, TagAlarmChange>();
+	for (const change of changes) {
+		if (change.isTest) continue;
+		const key = `${change.tagId} ${change.direction} ${change.raisedAt}`;
+		const begun = found.get(key);
+		if (change.kind === 'found') found.set(`found ${key}`, change);
+		else if (change.kind === 'raised')
+			found.set(key, { ...change, kind: 'found', levelNow: null, isLate: true, at: change.raisedAt });
+		else if (begun) found.set(key, { ...begun, level: change.level, at: Math.max(begun.at, change.at) });
+	}
+	return [...found.values()];
 }

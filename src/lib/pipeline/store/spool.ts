@@ -5,7 +5,7 @@ import type { LocalDatabase } from './local-file.ts';
 import { packForSpool, unpackFromSpool, type PackedReadings } from './spool-codec.ts';
 import { SpoolFile, type SpoolNote } from './spool-file.ts';
 import { asFoundAfterwards, type BatchRow, type SpooledChange, type SpooledTag } from './spool-rows.ts';
-import type { WriteBatch } from './write-batch.ts';
+import type { TagAlarmChange, WriteBatch } from './write-batch.ts';
 
 export interface SpoolOptions {
 	path: string;
@@ -240,19 +240,18 @@ export class Spool {
 		return true;
 	}
 
-	/** The first changes in their order; null for one that is nobody's any more, since another collector has run its source meanwhile. */
-	firstChanges(most: number): { seq: number; change: SpooledChange | null }[] {
+	/** The first changes in their order. */
+	firstChanges(most: number): { seq: number; change: SpooledChange }[] {
 		return this.#file.read((db) => {
-			const rows = db.prepare('SELECT seq, kind, is_foreign, change FROM changes ORDER BY seq LIMIT ?').all(most) as {
+			const rows = db.prepare('SELECT seq, kind, change FROM changes ORDER BY seq LIMIT ?').all(most) as {
 				seq: number;
 				kind: SpooledChange['kind'];
-				is_foreign: number;
 				change: string;
 			}[];
-			return rows.map((row) => {
-				const change = { kind: row.kind, change: JSON.parse(row.change) as never } as SpooledChange;
-				return { seq: row.seq, change: row.is_foreign ? asFoundAfterwards(change) : change };
-			});
+			return rows.map((row) => ({
+				seq: row.seq,
+				change: { kind: row.kind, change: JSON.parse(row.change) as never } as SpooledChange,
+			}));
 		}, []);
 	}
 
@@ -302,7 +301,13 @@ export class Spool {
 	disown(sourceIds: readonly string[]): void {
 		this.#file.write((db) => {
 			for (const id of sourceIds) {
-				db.prepare('UPDATE changes SET is_foreign = 1 WHERE source_id = ?').run(id);
+				const rows = db
+					.prepare("SELECT change FROM changes WHERE source_id = ? AND is_foreign = 0 AND kind = 'alarm' ORDER BY seq")
+					.all(id) as { change: string }[];
+				db.prepare('DELETE FROM changes WHERE source_id = ? AND is_foreign = 0').run(id);
+				const keep = db.prepare("INSERT INTO changes (source_id, is_foreign, kind, change) VALUES (?, 1, 'alarm', ?)");
+				for (const found of asFoundAfterwards(rows.map((row) => JSON.parse(row.change) as TagAlarmChange)))
+					keep.run(id, JSON.stringify(found));
 				db.prepare('DELETE FROM tags WHERE source_id = ?').run(id);
 			}
 		});
