@@ -21,6 +21,7 @@ import { benchFreshness } from './bench/freshness.ts';
 import { benchOpcua } from './bench/opcua.ts';
 import { benchModbus } from './bench/modbus.ts';
 import { benchMqtt } from './bench/mqtt.ts';
+import { benchPacking } from './bench/packing.ts';
 import { benchPages } from './bench/pages.ts';
 import { benchTrendGrowth } from './bench/trend-growth.ts';
 import { Refusal } from './bootstrap.js';
@@ -164,14 +165,14 @@ async function feed(pool: Pool, url: string, siteId: number): Promise<BenchLine>
 }
 
 const asked = process.argv.slice(2);
-const KNOWN = ['ingest', 'feed', 'trend-growth', 'modbus', 'opcua', 'mqtt', 'freshness', 'pages'];
+const KNOWN = ['ingest', 'feed', 'trend-growth', 'packing', 'modbus', 'opcua', 'mqtt', 'freshness', 'pages'];
 for (const name of asked)
 	if (!KNOWN.includes(name)) throw new Refusal(`No benchmark is named "${name}". Known: ${KNOWN.join(', ')}.`);
 
 const wants = (name: string) => asked.length === 0 || asked.includes(name);
 const print = (line: BenchLine) => console.log(JSON.stringify(line));
 
-if (['ingest', 'feed', 'trend-growth', 'mqtt', 'freshness'].some(wants)) await storeBenches();
+if (['ingest', 'feed', 'trend-growth', 'packing', 'mqtt', 'freshness'].some(wants)) await storeBenches();
 if (wants('modbus')) print(await benchModbus());
 if (wants('opcua')) print(await benchOpcua());
 if (wants('pages')) (await benchPages()).forEach(print);
@@ -192,6 +193,7 @@ async function storeBenches(): Promise<void> {
 		if (wants('trend-growth')) print(await benchTrendGrowth(pool, tagIds[0] ?? 0));
 		const ingested = wants('ingest') || wants('feed') ? await ingest(pool, siteId, tagIds) : null;
 		if (wants('ingest') && ingested) print(ingested);
+		if (wants('packing')) print(await benchPacking(pool, siteId, tagIds));
 		if (wants('feed')) print(await feed(pool, cluster.url, siteId));
 		if (wants('mqtt')) print(await benchMqtt(pool, siteId, tagIds.slice(0, 100)));
 		if (wants('freshness')) print(await benchFreshness(pool, siteId));

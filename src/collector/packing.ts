@@ -23,7 +23,7 @@ export function createPacking(pool: Pool, now: () => number, rest?: number): Pac
 	const options = { signal: stop.signal, ...(rest === undefined ? {} : { rest }) };
 	let lateAt = -Infinity;
 	const work = async () => {
-		await pool.query('SELECT drop_packed_days()');
+		await dropPacked(pool);
 		const { rowDays } = await readRetention(pool);
 		await regroupBlocks(pool, options);
 		for (;;) {
@@ -33,7 +33,7 @@ export function createPacking(pool: Pool, now: () => number, rest?: number): Pac
 			const readings = await packDay(pool, day, options);
 			if (readings === null) return;
 			log.info({ day, readings, tookMs: Math.round(performance.now() - started) }, 'a day of readings was packed');
-			await pool.query('SELECT drop_packed_days()');
+			await dropPacked(pool);
 		}
 		if (performance.now() - lateAt < LATE_EVERY_MS) return;
 		await packLate(pool, options);
@@ -62,4 +62,15 @@ export function createPacking(pool: Pool, now: () => number, rest?: number): Pac
 		},
 		stop: () => stop.abort(),
 	};
+}
+
+const LOCK_NOT_AVAILABLE = '55P03';
+
+/** Drops the rows of packed days. A reader that holds them longer than the wait for the lock is not in the way of more packing: the next run drops them. */
+async function dropPacked(pool: Pool): Promise<void> {
+	try {
+		await pool.query('SELECT drop_packed_days()');
+	} catch (error) {
+		if (!(error instanceof Error && 'code' in error && error.code === LOCK_NOT_AVAILABLE)) throw error;
+	}
 }
