@@ -1,6 +1,5 @@
 // Edge: collector. Housekeeping that one collector at a time does. May touch: partitions, retention, log tables.
 import { dropExpired, ensurePartitionsAhead } from '#lib/pipeline/store/partitions.ts';
-import { readRetention } from '#lib/pipeline/store/retention.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
 import { log } from '#lib/server/log.ts';
 
@@ -24,11 +23,9 @@ export function createPipelineJobs(pool: Pool, now: () => number): Jobs {
 			try {
 				const lock = await client.query<{ got: boolean }>('SELECT pg_try_advisory_lock($1) AS got', [LOCK]);
 				if (lock.rows[0]?.got) {
-					const { exchangeDays } = await readRetention(pool);
 					const dropped = await dropExpired(pool, now());
 					if (dropped > 0) log.info({ dropped }, 'partitions past their retention were dropped');
 					await pool.query("DELETE FROM source_events WHERE at < now() - interval '30 days'");
-					await pool.query('DELETE FROM source_exchanges WHERE at < now() - make_interval(days => $1)', [exchangeDays]);
 					await pool.query("DELETE FROM source_requests WHERE requested_at < now() - interval '1 day'");
 					await pool.query("DELETE FROM source_minutes WHERE minute < now() - interval '90 days'");
 				}

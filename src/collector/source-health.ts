@@ -1,6 +1,9 @@
 // Edge: collector. What one source's run counts, and what is written of it. May touch: source health, event, exchange and minute tables.
 import type { Advice, Exchange, SourceObserver } from '#lib/pipeline/sources/source.ts';
+import { ensureExchangeDay } from '#lib/pipeline/store/partitions.ts';
 import type { Pool } from '#lib/server/db/pool.ts';
+
+const DAY_MS = 86_400_000;
 
 export type HealthState = 'ok' | 'late' | 'lost' | 'waiting' | 'off';
 
@@ -184,6 +187,8 @@ export class SourceCounts implements SourceObserver {
 		}
 		const exchanges = [...this.#toWrite];
 		if (exchanges.length > 0) {
+			// Failures are rare, so their day is asked for each time rather than relied on.
+			for (const day of new Set(exchanges.map((one) => Math.floor(one.at / DAY_MS)))) await ensureExchangeDay(pool, day * DAY_MS);
 			await pool.query(
 				`INSERT INTO source_exchanges (source_id, at, direction, bytes, meaning, failed) SELECT $1, g.at, g.direction, g.bytes, g.meaning, g.failed
 				 FROM unnest($2::timestamptz[], $3::text[], $4::text[], $5::text[], $6::bool[]) AS g(at, direction, bytes, meaning, failed)`,

@@ -1,5 +1,9 @@
+import { cpSync, mkdtempSync, readFileSync, rmSync, writeFileSync } from 'node:fs';
+import { tmpdir } from 'node:os';
+import { join } from 'node:path';
 import pg from 'pg';
 import { afterAll, beforeAll, describe, expect, it } from 'vitest';
+import { migrateDatabase } from '#lib/server/db/migrate.ts';
 import { createPool, type Pool } from '#lib/server/db/pool.ts';
 import { cloneDatabase } from '../support/cluster.ts';
 
@@ -53,5 +57,54 @@ describe('a freshly migrated database', () => {
 		expect(found.rows).toEqual([
 			{ at: new Date('2026-12-02T10:59:59.999Z'), value: 1, hour: new Date('2026-12-02T10:00:00.000Z') },
 		]);
+	});
+});
+
+describe('a store of an earlier version', () => {
+	it('keeps its readings and exchanges, and takes new ones', async () => {
+		const folder = mkdtempSync(join(tmpdir(), 'millrace-migrations-'));
+		cpSync('drizzle', folder, { recursive: true });
+		const file = join(folder, 'meta/_journal.json');
+		const journal = JSON.parse(readFileSync(file, 'utf8')) as { entries: { tag: string }[] };
+		// The last version without packed days.
+		const entries = journal.entries.filter(({ tag }) => tag < '0005');
+		writeFileSync(file, JSON.stringify({ ...journal, entries }));
+		const server = process.env.TEST_CLUSTER_URL ?? '';
+		const name = `t_earlier_${process.pid}`;
+		const admin = new pg.Client({ connectionString: `${server}/postgres` });
+		await admin.connect();
+		await admin.query(`CREATE DATABASE ${name}`);
+		const url = `${server}/${name}`;
+		try {
+			await migrateDatabase(url, folder);
+			const owner = new pg.Client({ connectionString: url, options: '-c timezone=UTC' });
+			await owner.connect();
+			await owner.query("SELECT ensure_partition('readings', '2026-11-20', '2026-11-21')");
+			await owner.query(
+				"INSERT INTO readings (tag_id, at, value, quality, received_at, is_hub_time, revision) VALUES (1, '2026-11-20T10:00:00Z', 5, 0, now(), false, 1)",
+			);
+			await owner.query(
+				`WITH site AS (INSERT INTO sites (slug, name) VALUES ('a', 'A') RETURNING id),
+					source AS (INSERT INTO sources (site_id, name, kind, settings) SELECT id, 'S', 'mqtt', '{}' FROM site RETURNING id)
+				 INSERT INTO source_exchanges (source_id, at, direction, bytes, meaning, failed)
+				 SELECT id, at::timestamptz, 'in', '01', 'x', true FROM source, unnest(ARRAY['2026-11-20T10:00:00Z', '2026-11-21T23:59:59Z']) AS at`,
+			);
+			await migrateDatabase(url, 'drizzle');
+			expect((await owner.query('SELECT at, value FROM reading_history')).rows).toEqual([
+				{ at: new Date('2026-11-20T10:00:00Z'), value: 5 },
+			]);
+			expect((await owner.query('SELECT id, at, meaning FROM source_exchanges ORDER BY at')).rows).toMatchObject([
+				{ at: new Date('2026-11-20T10:00:00Z'), meaning: 'x' },
+				{ at: new Date('2026-11-21T23:59:59Z') },
+			]);
+			// Past its days an exchange goes with its table.
+			expect((await owner.query("SELECT drop_partitions('source_exchanges', '2026-11-21') AS n")).rows[0].n).toBe(1);
+			expect((await owner.query('SELECT count(*)::int AS n FROM source_exchanges')).rows[0].n).toBe(1);
+			await owner.end();
+		} finally {
+			await admin.query(`DROP DATABASE ${name} WITH (FORCE)`);
+			await admin.end();
+			rmSync(folder, { recursive: true });
+		}
 	});
 });

@@ -40,6 +40,11 @@ export async function ensureJournalDay(client: Queryable, at: number): Promise<v
 	await client.query("SELECT ensure_partition('feed_journal', $1::date, $2::date)", [dayOf(at), dayOf(at + DAY_MS)]);
 }
 
+/** Makes the partition of exchanges around failures for a day. */
+export async function ensureExchangeDay(client: Queryable, at: number): Promise<void> {
+	await client.query("SELECT ensure_partition('source_exchanges', $1::date, $2::date)", [dayOf(at), dayOf(at + DAY_MS)]);
+}
+
 /** Makes every partition that the next week needs; harmless when they are there. Run at start and hourly. */
 export async function ensurePartitionsAhead(client: Queryable, now: number): Promise<void> {
 	for (let day = -1; day <= DAYS_AHEAD; day += 1) {
@@ -72,6 +77,7 @@ export async function dropExpired(pool: Pool, now: number): Promise<number> {
 		['rollups_minute', retention.minuteDays],
 		['rollups_hour', retention.hourDays],
 		['feed_journal', retention.journalDays],
+		['source_exchanges', retention.exchangeDays],
 	] as const) {
 		const answer = await pool.query<{ n: number }>('SELECT drop_partitions($1, $2::date) AS n', [
 			parent,

@@ -188,11 +188,15 @@ async function write(client: Client, table: 'rollups_minute' | 'rollups_hour', s
 	}
 }
 
+/** A tag's oldest reading or the hour of its oldest block, without opening any. */
+const OLDEST = `SELECT least((SELECT min(at) FROM recent_readings WHERE tag_id = t.id), (SELECT min(at) FROM late_readings WHERE tag_id = t.id),
+	(SELECT min(hour) FROM reading_blocks WHERE tag_id = t.id AND hour < (SELECT packed_until FROM packing_state))) AS at`;
+
 /** Days from the oldest reading on are made whole, one a step; what comes meanwhile is made by the journal as always. */
 async function beginBackfill(client: Client, siteId: number, position: number, now: number): Promise<void> {
 	await client.query(
 		`UPDATE rollup_progress SET position = $2, minute_until = '1970-01-01 00:00:00+00', backfill_until = $3::timestamptz::date,
-			backfill_day = (SELECT min(first.at)::date FROM tags t CROSS JOIN LATERAL (SELECT min(r.at) AS at FROM reading_history r WHERE r.tag_id = t.id) first WHERE t.site_id = $1)
+			backfill_day = (SELECT min(first.at)::date FROM tags t CROSS JOIN LATERAL (${OLDEST}) first WHERE t.site_id = $1)
 		 WHERE site_id = $1`,
 		[siteId, position, iso(now)],
 	);

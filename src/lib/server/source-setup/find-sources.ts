@@ -86,7 +86,7 @@ export async function findHealth(pool: Pool, source: SourceShown, range: { from:
 		[source.id],
 	);
 	const exchanges = await pool.query(
-		'SELECT at, direction, bytes, meaning, failed FROM source_exchanges WHERE source_id = $1 ORDER BY id DESC LIMIT 100',
+		'SELECT at, direction, bytes, meaning, failed FROM source_exchanges WHERE source_id = $1 ORDER BY at DESC, id DESC LIMIT 100',
 		[source.id],
 	);
 	const isUnowned = row !== undefined && row.is_owned !== true;

@@ -113,7 +113,7 @@ export const sourceEvents = pgTable(
 	(t) => [index('source_events_by_source').on(t.sourceId, t.id.desc())],
 );
 
-/** Exchanges around failures (bytes and meaning), kept 30 days. */
+/** Exchanges around failures (bytes and meaning), one partition a UTC day (made by hand in the migrations), 30 days of them unless set otherwise. */
 export const sourceExchanges = pgTable(
 	'source_exchanges',
 	{
