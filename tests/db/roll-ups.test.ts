@@ -204,4 +204,51 @@ describe('a trend', () => {
 		}
 		expect((await findTrend(pool, other, t0, t0 + 5 * HOUR, 50)).buckets).toEqual([]);
 	});
+
+	it.each([
+		// From memory: Nepal is 5 h 45 min ahead of UTC all year, Newfoundland 3 h 30 min or 2 h 30 min behind.
+		['Asia/Kathmandu', -5.75, [24, 24, 24, 24]],
+		['America/St_Johns', 0, null],
+	] as const)('of days is cut at the midnights of the site in %s', async (zone, offsetHours, lengths) => {
+		const { siteId, tagIds } = await siteWithTags(pool, 1);
+		const tagId = tagIds[0] ?? 0;
+		const day = 24 * HOUR;
+		const today = Math.floor(now / day) * day;
+		// A reading a minute over six days, its value the count of minutes since the first.
+		const first = today - 6 * day;
+		const points = Array.from({ length: 6 * 1_440 }, (_, i) => ({ at: first + i * 60_000, value: i, quality: 0 }));
+		await writer.write(batchOf(points.map((point) => reading(siteId, tagId, point))));
+		const midnight = new Intl.DateTimeFormat('en-GB', { timeZone: zone, hour: '2-digit', minute: '2-digit', hourCycle: 'h23' });
+		const ask = () => findTrend(pool, tagId, first, today, 8, zone);
+		// Once from readings alone, once from roll-ups.
+		const before = await ask();
+		await rollAll();
+		const after = await ask();
+		expect(after.widthS).toBe(86_400);
+		expect(after.buckets.map(({ at, n, min, max, worst }) => [at, n, min, max, worst])).toEqual(
+			before.buckets.map(({ at, n, min, max, worst }) => [at, n, min, max, worst]),
+		);
+		after.buckets.forEach(({ mean }, i) => expect(mean).toBeCloseTo(before.buckets[i]?.mean ?? Number.NaN, 6));
+		for (const [i, { at, min, max, n }] of after.buckets.entries()) {
+			const end = after.buckets[i + 1]?.at ?? today;
+			expect(midnight.format(at)).toBe('00:00');
+			const own = points.filter((point) => point.at >= at && point.at < end);
+			expect([min, max, n]).toEqual([own[0]?.value, own.at(-1)?.value, own.length]);
+		}
+		if (lengths) {
+			const starts = after.buckets.map(({ at }) => at);
+			expect(starts.slice(1, 5).map((at, i) => (at - (starts[i] ?? 0)) / HOUR)).toEqual(lengths);
+			expect(starts[1]).toBe(first + day + offsetHours * HOUR);
+		}
+	});
+
+	it('shows a reading that came just after the last step for a minute before it', async () => {
+		const { siteId, tagIds } = await siteWithTags(pool, 1);
+		const tagId = tagIds[0] ?? 0;
+		await writer.write(batchOf([storedReading(siteId, tagId, t0, 1)]));
+		await rollAll(t0 + 10 * 60_000);
+		await writer.write(batchOf([storedReading(siteId, tagId, t0 + 10 * 60_000 - 50, 2)]));
+		const trend = await findTrend(pool, tagId, t0, t0 + HOUR, 61);
+		expect([trend.level, trend.buckets.map(({ max }) => max)]).toEqual(['minute', [1, 2]]);
+	});
 });

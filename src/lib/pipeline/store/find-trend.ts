@@ -1,6 +1,7 @@
 // Edge: store. May touch: pool; readings and roll-ups, to read.
 import type { Pool } from '#lib/server/db/pool.ts';
 import { bucketSql } from './roll-up-sql.ts';
+import { dayOfPart, listDays, partsOfDays } from './trend-days.ts';
 
 export interface TrendBucket {
 	/** Begin of the bucket, milliseconds. */
@@ -24,6 +25,9 @@ export interface Trend {
 }
 
 const HOUR_S = 3_600;
+const DAY_S = 86_400;
+/** Width in which readings are shared out to a site's days: every zone's days begin at a quarter of an hour. */
+const QUARTER_S = 900;
 /** Widths a bucket may have, so that what is written beside a trend is a plain span of time. */
 const WIDTHS_S = [
 	1, 2, 5, 10, 15, 30, 60, 120, 300, 600, 900, 1_800, 3_600, 7_200, 14_400, 21_600, 43_200, 86_400, 172_800, 604_800,
@@ -40,7 +44,8 @@ function levelOf(widthS: number): TrendLevel {
 	return widthS >= HOUR_S ? 'hour' : widthS >= 60 ? 'minute' : 'readings';
 }
 
-interface Part {
+/** What one bucket holds, or a piece of it. */
+export interface TrendPart {
 	begin_s: number;
 	n: number;
 	min: number | null;
@@ -53,19 +58,24 @@ interface Part {
 /**
  * A tag's course over [from, to) in at most `points` buckets; buckets without a reading are left out, so that a gap stays a gap.
  * Wide buckets are made of roll-ups, so that a year costs about what a day does; what these do not hold yet is made of the readings.
- * Only readings in the unit that stands now.
+ * Buckets of days are the site's days in `timeZone`. Only readings in the unit that stands now.
  */
-export async function findTrend(pool: Pool, tagId: number, from: number, to: number, points: number): Promise<Trend> {
+export async function findTrend(
+	pool: Pool,
+	tagId: number,
+	from: number,
+	to: number,
+	points: number,
+	timeZone = 'UTC',
+): Promise<Trend> {
 	// Buckets begin at multiples of their width, so one more may be touched at the left edge.
 	const widthS = bucketWidthS(to - from, Math.max(1, points - 1));
 	const level = levelOf(widthS);
+	if (widthS >= DAY_S && timeZone !== 'UTC')
+		return findDays(pool, tagId, from, to, { points, timeZone, daysEach: widthS / DAY_S });
 	const begin = floorTo(from, widthS);
 	if (level === 'readings') return { widthS, level, buckets: merge([await ofReadings(pool, tagId, begin, to, widthS)]) };
-	const found = await pool.query<{ until: Date }>(
-		'SELECT p.minute_until AS until FROM tags t JOIN rollup_progress p ON p.site_id = t.site_id WHERE t.id = $1',
-		[tagId],
-	);
-	const minuteUntil = Math.max(begin, floorTo(Math.min(to, found.rows[0]?.until.getTime() ?? 0), 60));
+	const minuteUntil = Math.max(begin, floorTo(Math.min(to, await readMinuteUntil(pool, tagId)), 60));
 	const hourUntil = Math.max(begin, floorTo(minuteUntil, HOUR_S));
 	const parts = await Promise.all([
 		level === 'hour' ? ofRollUps(pool, 'rollups_hour', tagId, begin, hourUntil, widthS) : [],
@@ -73,6 +83,40 @@ export async function findTrend(pool: Pool, tagId: number, from: number, to: num
 		ofReadings(pool, tagId, minuteUntil, to, widthS),
 	]);
 	return { widthS, level, buckets: merge(parts) };
+}
+
+interface DaysAsked {
+	points: number;
+	timeZone: string;
+	daysEach: number;
+}
+
+async function findDays(pool: Pool, tagId: number, from: number, to: number, asked: DaysAsked): Promise<Trend> {
+	const [until, bounds] = await Promise.all([
+		readMinuteUntil(pool, tagId),
+		listDays(pool, asked.timeZone, from, to, asked.daysEach),
+	]);
+	// A range that touches a day of 23 hours may hold one more than asked for.
+	if (bounds.starts.length > asked.points)
+		return findDays(pool, tagId, from, to, { ...asked, daysEach: asked.daysEach < 7 ? 7 : asked.daysEach + 7 });
+	const begin = bounds.starts[0] ?? from;
+	const minuteUntil = Math.max(begin, floorTo(Math.min(to, until), QUARTER_S));
+	const hourUntil = Math.max(begin, floorTo(minuteUntil, HOUR_S));
+	const [rolled, read] = await Promise.all([
+		partsOfDays(pool, tagId, bounds, hourUntil, minuteUntil),
+		ofReadings(pool, tagId, minuteUntil, to, QUARTER_S),
+	]);
+	const placed = read.map((part) => ({ ...part, begin_s: dayOfPart(bounds.starts, part.begin_s) }));
+	return { widthS: asked.daysEach * DAY_S, level: 'hour', buckets: merge([rolled, placed]) };
+}
+
+/** Up to when readers go by a tag's roll-ups, ms. */
+async function readMinuteUntil(pool: Pool, tagId: number): Promise<number> {
+	const found = await pool.query<{ until: Date }>(
+		'SELECT p.minute_until AS until FROM tags t JOIN rollup_progress p ON p.site_id = t.site_id WHERE t.id = $1',
+		[tagId],
+	);
+	return found.rows[0]?.until.getTime() ?? 0;
 }
 
 const iso = (at: number) => new Date(at).toISOString();
@@ -85,9 +129,9 @@ async function ofRollUps(
 	from: number,
 	to: number,
 	widthS: number,
-): Promise<Part[]> {
+): Promise<TrendPart[]> {
 	if (to <= from) return [];
-	const found = await pool.query<Part>(
+	const found = await pool.query<TrendPart>(
 		`SELECT (floor(extract(epoch FROM r.bucket)::float8 / $4) * $4)::float8 AS begin_s, sum(r.n)::int AS n, min(r.min) AS min, max(r.max) AS max,
 			sum(r.area) AS area, sum(r.covered_s) AS covered_s, max(r.worst::bit(32)::bigint)::float8 AS worst
 		 FROM ${table} r WHERE r.tag_id = $1 AND r.bucket >= $2 AND r.bucket < $3
@@ -98,9 +142,9 @@ async function ofRollUps(
 	return found.rows;
 }
 
-async function ofReadings(pool: Pool, tagId: number, from: number, to: number, widthS: number): Promise<Part[]> {
+async function ofReadings(pool: Pool, tagId: number, from: number, to: number, widthS: number): Promise<TrendPart[]> {
 	if (to <= from) return [];
-	const found = await pool.query<Part>(
+	const found = await pool.query<TrendPart>(
 		`SELECT begin_s, n, min, max, area, covered_s, worst::float8 AS worst
 		 FROM (${bucketSql('SELECT $1::int AS tag_id, $2::timestamptz AS a, $3::timestamptz AS b', '$4::float8')}) AS made`,
 		[tagId, iso(from), iso(to), widthS],
@@ -109,8 +153,8 @@ async function ofReadings(pool: Pool, tagId: number, from: number, to: number, w
 }
 
 /** One bucket a begin, in order; a bucket at the edge may be made of hours, minutes and readings together. */
-function merge(lists: readonly Part[][]): TrendBucket[] {
-	const byBegin = new Map<number, Part>();
+function merge(lists: readonly TrendPart[][]): TrendBucket[] {
+	const byBegin = new Map<number, TrendPart>();
 	for (const part of lists.flat()) {
 		const known = byBegin.get(part.begin_s);
 		if (!known) {
@@ -136,7 +180,7 @@ function merge(lists: readonly Part[][]): TrendBucket[] {
 		}));
 }
 
-function meanOf(part: Part): number | null {
+function meanOf(part: TrendPart): number | null {
 	if (part.covered_s > 0) return part.area / part.covered_s;
 	// A single value at the very end of a bucket stood for no time in it.
 	return part.min === null || part.max === null ? null : (part.min + part.max) / 2;

@@ -13,6 +13,8 @@ const DAY_MS = 86_400_000;
 const STEP = 200_000;
 /** Stretches of one statement, each of an hour at most: 360,000 readings of tags that come every second. */
 const CHUNK = 100;
+/** Readers take the newest minutes from the readings themselves: some of these are still on their way while a step looks. */
+const SETTLES_MS = 2 * MINUTE_MS;
 
 /** A stretch of one tag, [from, to), ms. */
 export interface Stretch {
@@ -74,7 +76,7 @@ async function rollUpSite(pool: Pool, siteId: number, now: number): Promise<bool
 		const isBehind = until < position || progress.backfill_day !== null;
 		await client.query(
 			'UPDATE rollup_progress SET position = $2, closed_until = $3, minute_until = CASE WHEN $4 THEN minute_until ELSE $5 END WHERE site_id = $1',
-			[siteId, until, iso(thisHour), isBehind, iso(Math.floor(now / MINUTE_MS) * MINUTE_MS)],
+			[siteId, until, iso(thisHour), isBehind, iso(Math.floor((now - SETTLES_MS) / MINUTE_MS) * MINUTE_MS)],
 		);
 		return isBehind;
 	});

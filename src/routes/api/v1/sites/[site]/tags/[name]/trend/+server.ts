@@ -62,7 +62,7 @@ export const GET = api(
 		const tag = await findTag(db, site.id, params.name);
 		if (!tag) throw new Problem(404, 'tag-not-found', 'No published tag at this site has that name.');
 		const [{ buckets, widthS, level }, limits, events] = await Promise.all([
-			findTrend(pool, tag.id, from, to, query.points),
+			findTrend(pool, tag.id, from, to, query.points, site.timeZone),
 			findLimitCourse(pool, tag.id, from, to),
 			findCourseEvents(pool, tag.id, from, to),
 		]);
