@@ -1,4 +1,5 @@
 import { mkdtempSync, mkdirSync, rmSync, writeFileSync } from 'node:fs';
+import { createConnection, createServer, type Socket } from 'node:net';
 import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { afterAll, afterEach, beforeAll, describe, expect, it } from 'vitest';
@@ -143,6 +144,40 @@ describe('reading by subscription', () => {
 		await until(() => samples.slice(before).some((sample) => valueOf(sample) === 78));
 		expect(samples.slice(before).some((sample) => valueOf(sample) === 77)).toBe(false);
 	});
+});
+
+describe('a network that gathers what it carries', () => {
+	it('loses no first value that comes in one piece with the answer that its item was created', async () => {
+		// What the server sends is passed on in one piece every 400 ms, four publishings long.
+		const sockets = new Set<Socket>();
+		const proxy = createServer((client) => {
+			const upstream = createConnection(server.port, '127.0.0.1');
+			let gathered: Buffer[] = [];
+			const pass = setInterval(() => {
+				if (gathered.length > 0) client.write(Buffer.concat(gathered));
+				gathered = [];
+			}, 400);
+			client.on('data', (chunk) => upstream.write(chunk));
+			upstream.on('data', (chunk) => gathered.push(chunk));
+			for (const socket of [client, upstream]) {
+				sockets.add(socket);
+				socket.on('error', () => undefined);
+				socket.on('close', () => {
+					clearInterval(pass);
+					client.destroy();
+					upstream.destroy();
+				});
+			}
+		});
+		const port = await freePort();
+		await new Promise<void>((resolve) => proxy.listen(port, '127.0.0.1', resolve));
+		running.push(async () => {
+			for (const socket of sockets) socket.destroy();
+			await new Promise((resolve) => proxy.close(resolve));
+		});
+		const { values } = await open(wanted(['V0', 'V1']), { endpoint_url: `opc.tcp://127.0.0.1:${port}` });
+		await until(() => new Set(values().map((sample) => sample.key)).size === 2, 20_000);
+	}, 30_000);
 });
 
 describe('a value that was dropped before this one', () => {
