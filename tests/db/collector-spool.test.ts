@@ -87,7 +87,7 @@ describe('while PostgreSQL is away a collector with a spool', () => {
 		// Oldest first: what was spooled is fed in the order of its time.
 		const spooled = fed.filter((value) => (value ?? 0) <= 400);
 		expect(spooled).toEqual(numbers(400));
-		expect((await site.latest('steady'))?.value).toBe(420);
+		await until('the latest value', async () => (await site.latest('steady'))?.value === 420);
 		expect(collector.pipeline.counts.dropped).toBe(0);
 		await site.end();
 	});
