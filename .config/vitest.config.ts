@@ -3,7 +3,7 @@ import { defineConfig } from 'vitest/config';
 
 const root = resolve(import.meta.dirname, '..');
 
-/** unit: pure code beside its test. db, wire, api: the real PostgreSQL and real sockets, in `tests/`. */
+/** unit: pure code beside its test. db, wire, api: the real PostgreSQL and real sockets, in `tests/`. ledger: the whole product under faults. */
 export default defineConfig({
 	root,
 	test: {
@@ -31,6 +31,15 @@ export default defineConfig({
 				test: {
 					name: 'wire',
 					include: ['tests/wire/**/*.test.ts', 'tests/contract/**/*.test.ts'],
+					testTimeout: 60_000,
+					hookTimeout: 60_000,
+				},
+			},
+			{
+				root,
+				test: {
+					name: 'ledger',
+					include: ['tests/ledger/**/*.test.ts'],
 					testTimeout: 60_000,
 					hookTimeout: 60_000,
 				},

@@ -105,6 +105,7 @@ export async function runTests(what: 'check' | 'everything'): Promise<number> {
 			counts.push(await vitest('database', ['db'], scratch));
 			counts.push(await vitest('wire', ['wire'], scratch));
 			counts.push(await vitest('api', ['api'], scratch));
+			counts.push(await vitest('ledger', ['ledger'], scratch));
 			counts.push(await browser(scratch));
 		}
 	} finally {

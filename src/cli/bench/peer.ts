@@ -22,6 +22,7 @@ export async function startPeer(script: string, args: readonly string[]): Promis
 		child,
 		say: (line) => child.stdin?.write(`${line}\n`),
 		async stop() {
+			if (child.exitCode !== null || child.signalCode !== null) return;
 			const ended = once(child, 'exit');
 			child.kill('SIGTERM');
 			await ended;
