@@ -8,7 +8,7 @@ import { createPool, type Pool } from '#lib/server/db/pool.ts';
 import { startPeer, type Peer } from '../bench/peer.ts';
 import { findFreePort, startThrowawayProduct, type ThrowawayProduct } from '../throwaway-product.ts';
 import { FAULTS, type FaultName, type Rig } from './faults.ts';
-import { startFaultProxy, type FaultProxy } from './fault-proxy.ts';
+import { startFaultProxy } from './fault-proxy.ts';
 import { FeedCount } from './feed-count.ts';
 
 export interface SoakOptions {
