@@ -201,6 +201,10 @@ describe('a trend', () => {
 			expect(trend.buckets.map(({ at, min, max, n, worst }) => [at, min, max, n, worst])).toEqual(
 				expected.map(({ bucket, min, max, n, worst }) => [bucket, min, max, n, worst]),
 			);
+			// The bucket that holds the edge is not over yet, and weighs what has passed.
+			expected.slice(0, -1).forEach(({ area, coveredS }, i) => {
+				if (coveredS > 0) expect(trend.buckets[i]?.mean).toBeCloseTo(area / coveredS, 4);
+			});
 		}
 		expect((await findTrend(pool, other, t0, t0 + 5 * HOUR, 50)).buckets).toEqual([]);
 	});
@@ -240,6 +244,45 @@ describe('a trend', () => {
 			expect(starts.slice(1, 5).map((at, i) => (at - (starts[i] ?? 0)) / HOUR)).toEqual(lengths);
 			expect(starts[1]).toBe(first + day + offsetHours * HOUR);
 		}
+	});
+
+	it.each([
+		// Ten stands for 540 s, twenty for 60 s: (10 * 540 + 20 * 60) / 600 = 11.
+		['reported on change', "'mqtt'", '{}', 11],
+		// A line from 10 to 20 over 540 s, then 20 held: (15 * 540 + 20 * 60) / 600 = 15.5.
+		['polled every five minutes', "'modbus'", '{"interval_ms": 300000}', 15.5],
+	] as const)('of a value %s weighs the time between two minutes that hold a reading (by hand)', async (_, kind, row, mean) => {
+		const { siteId, tagIds } = await siteWithTags(pool, 1);
+		const tagId = tagIds[0] ?? 0;
+		const source = await pool.query<{ id: string }>(
+			`INSERT INTO sources (site_id, name, kind, settings) VALUES ($1, 'S', ${kind}, '{}') RETURNING id`,
+			[siteId],
+		);
+		await pool.query('UPDATE tags SET source_id = $2, row = $3 WHERE id = $1', [tagId, source.rows[0]?.id, row]);
+		await writer.write(batchOf([storedReading(siteId, tagId, t0, 10), storedReading(siteId, tagId, t0 + 540_000, 20)]));
+		const ask = async () => (await findTrend(pool, tagId, t0, t0 + 600_000 * 40, 41)).buckets[0];
+		const before = await ask();
+		await rollAll();
+		expect((await ask())?.mean).toBeCloseTo(mean, 9);
+		expect(await ask()).toEqual(before);
+	});
+
+	it('of a value that stands over the bound of a bucket counts on both sides of it', async () => {
+		const { siteId, tagIds } = await siteWithTags(pool, 1);
+		const tagId = tagIds[0] ?? 0;
+		const source = await pool.query<{ id: string }>(
+			`INSERT INTO sources (site_id, name, kind, settings) VALUES ($1, 'S', 'mqtt', '{}') RETURNING id`,
+			[siteId],
+		);
+		await pool.query('UPDATE tags SET source_id = $2, row = $3 WHERE id = $1', [tagId, source.rows[0]?.id, '{}']);
+		// 10 from 300 s to 900 s, then 20: the second ten minutes are (10 * 300 + 20 * 300) / 600 = 15.
+		await writer.write(batchOf([storedReading(siteId, tagId, t0 + 300_000, 10), storedReading(siteId, tagId, t0 + 900_000, 20)]));
+		await rollAll();
+		const { buckets } = await findTrend(pool, tagId, t0, t0 + 600_000 * 40, 41);
+		expect(buckets.map(({ at, mean }) => [at - t0, mean])).toEqual([
+			[0, 10],
+			[600_000, 15],
+		]);
 	});
 
 	it('shows a reading that came just after the last step for a minute before it', async () => {

@@ -1,6 +1,6 @@
 // Edge: store. May touch: pool; readings and roll-ups, to read.
 import type { Pool } from '#lib/server/db/pool.ts';
-import { bucketSql } from './roll-up-sql.ts';
+import { bucketSql, STANDS_S, STEPPED } from './roll-up-sql.ts';
 import { dayOfPart, listDays, partsOfDays } from './trend-days.ts';
 
 export interface TrendBucket {
@@ -75,11 +75,13 @@ export async function findTrend(
 		return findDays(pool, tagId, from, to, { points, timeZone, daysEach: widthS / DAY_S });
 	const begin = floorTo(from, widthS);
 	if (level === 'readings') return { widthS, level, buckets: merge([await ofReadings(pool, tagId, begin, to, widthS)]) };
-	const minuteUntil = Math.max(begin, floorTo(Math.min(to, await readMinuteUntil(pool, tagId)), 60));
-	const hourUntil = Math.max(begin, floorTo(minuteUntil, HOUR_S));
+	const facts = await readFacts(pool, tagId);
+	const rolledUntil = Math.max(begin, floorTo(Math.min(to, facts.until), 60));
+	const hourUntil = Math.max(begin, floorTo(rolledUntil, HOUR_S));
+	const minuteUntil = facts.isSparse ? (level === 'hour' ? hourUntil : begin) : rolledUntil;
 	const parts = await Promise.all([
-		level === 'hour' ? ofRollUps(pool, 'rollups_hour', tagId, begin, hourUntil, widthS) : [],
-		ofRollUps(pool, 'rollups_minute', tagId, level === 'hour' ? hourUntil : begin, minuteUntil, widthS),
+		level === 'hour' ? ofHours(pool, tagId, begin, hourUntil, widthS) : [],
+		ofMinutes(pool, tagId, level === 'hour' ? hourUntil : begin, minuteUntil, widthS, facts.isStepped),
 		ofReadings(pool, tagId, minuteUntil, to, widthS),
 	]);
 	return { widthS, level, buckets: merge(parts) };
@@ -92,8 +94,8 @@ interface DaysAsked {
 }
 
 async function findDays(pool: Pool, tagId: number, from: number, to: number, asked: DaysAsked): Promise<Trend> {
-	const [until, bounds] = await Promise.all([
-		readMinuteUntil(pool, tagId),
+	const [{ until }, bounds] = await Promise.all([
+		readFacts(pool, tagId),
 		listDays(pool, asked.timeZone, from, to, asked.daysEach),
 	]);
 	// A range that touches a day of 23 hours may hold one more than asked for.
@@ -110,34 +112,77 @@ async function findDays(pool: Pool, tagId: number, from: number, to: number, ask
 	return { widthS: asked.daysEach * DAY_S, level: 'hour', buckets: merge([rolled, placed]) };
 }
 
-/** Up to when readers go by a tag's roll-ups, ms. */
-async function readMinuteUntil(pool: Pool, tagId: number): Promise<number> {
-	const found = await pool.query<{ until: Date }>(
-		'SELECT p.minute_until AS until FROM tags t JOIN rollup_progress p ON p.site_id = t.site_id WHERE t.id = $1',
+/** A polled value that comes this rarely has about as many readings as one-minute rows, and these say nothing of the line between them. */
+const SPARSE_S = 30;
+
+interface Facts {
+	/** Up to when readers go by the tag's roll-ups, ms. */
+	until: number;
+	/** A value stands until the next one. */
+	isStepped: boolean;
+	/** Joined by lines and rare: its minutes are better made of the readings. */
+	isSparse: boolean;
+}
+
+async function readFacts(pool: Pool, tagId: number): Promise<Facts> {
+	const found = await pool.query<{ until: Date | null; stepped: boolean; every_s: number }>(
+		`SELECT p.minute_until AS until, ${STEPPED} AS stepped,
+			greatest(coalesce((t.row->>'expected_every_s')::float8, 0), coalesce((t.row->>'interval_ms')::float8, 1000) / 1000) AS every_s
+		 FROM tags t LEFT JOIN sources s ON s.id = t.source_id LEFT JOIN rollup_progress p ON p.site_id = t.site_id WHERE t.id = $1`,
 		[tagId],
 	);
-	return found.rows[0]?.until.getTime() ?? 0;
+	const row = found.rows[0];
+	if (!row) return { until: 0, isStepped: true, isSparse: false };
+	return { until: row.until?.getTime() ?? 0, isStepped: row.stepped, isSparse: !row.stepped && row.every_s >= SPARSE_S };
 }
 
 const iso = (at: number) => new Date(at).toISOString();
 const floorTo = (at: number, widthS: number) => Math.floor(at / 1_000 / widthS) * widthS * 1_000;
 
-async function ofRollUps(
-	pool: Pool,
-	table: 'rollups_minute' | 'rollups_hour',
-	tagId: number,
-	from: number,
-	to: number,
-	widthS: number,
-): Promise<TrendPart[]> {
+async function ofHours(pool: Pool, tagId: number, from: number, to: number, widthS: number): Promise<TrendPart[]> {
 	if (to <= from) return [];
 	const found = await pool.query<TrendPart>(
 		`SELECT (floor(extract(epoch FROM r.bucket)::float8 / $4) * $4)::float8 AS begin_s, sum(r.n)::int AS n, min(r.min) AS min, max(r.max) AS max,
 			sum(r.area) AS area, sum(r.covered_s) AS covered_s, max(r.worst::bit(32)::bigint)::float8 AS worst
-		 FROM ${table} r WHERE r.tag_id = $1 AND r.bucket >= $2 AND r.bucket < $3
+		 FROM rollups_hour r WHERE r.tag_id = $1 AND r.bucket >= $2 AND r.bucket < $3
 			AND r.unit_revision = (SELECT unit_revision FROM tags WHERE id = $1)
 		 GROUP BY 1`,
 		[tagId, iso(from), iso(to), widthS],
+	);
+	return found.rows;
+}
+
+/** Minutes have a row only where a reading came; what stood between two of them counts too, within the buckets that hold them. */
+async function ofMinutes(
+	pool: Pool,
+	tagId: number,
+	from: number,
+	to: number,
+	widthS: number,
+	isStepped: boolean,
+): Promise<TrendPart[]> {
+	if (to <= from) return [];
+	const found = await pool.query<TrendPart>(
+		`WITH minutes AS (
+			SELECT r.n, r.min, r.max, r.area, r.covered_s, r.last, r.worst, extract(epoch FROM r.bucket)::float8 AS s
+			FROM rollups_minute r WHERE r.tag_id = $1 AND r.bucket >= $2::timestamptz - CASE WHEN $5 THEN interval '${STANDS_S} seconds' ELSE interval '0' END AND r.bucket < $3
+				AND r.unit_revision = (SELECT unit_revision FROM tags WHERE id = $1)
+		), placed AS (
+			SELECT *, (floor(s / $4) * $4)::float8 AS begin_s,
+				lag(s + 60) OVER one AS before_s, lag(last) OVER one AS before,
+				least(coalesce(lead(s) OVER one, extract(epoch FROM $3::timestamptz)::float8), (floor(s / $4) * $4)::float8 + $4) AS stands_until
+			FROM minutes WINDOW one AS (ORDER BY s)
+		), filled AS (
+			SELECT *,
+				CASE WHEN $5 AND last IS NOT NULL AND stands_until - s <= ${STANDS_S} THEN greatest(0, stands_until - s - 60) ELSE 0 END AS ahead_s,
+				CASE WHEN $5 AND before IS NOT NULL AND before_s <= begin_s AND s - before_s <= ${STANDS_S} THEN s - begin_s ELSE 0 END AS behind_s
+			FROM placed
+		)
+		SELECT begin_s, sum(n)::int AS n, min(min) AS min, max(max) AS max,
+			sum(area + coalesce(last * ahead_s, 0) + coalesce(before * behind_s, 0)) AS area,
+			sum(covered_s + ahead_s + behind_s) AS covered_s, max(worst::bit(32)::bigint)::float8 AS worst
+		FROM filled WHERE s >= extract(epoch FROM $2::timestamptz)::float8 GROUP BY begin_s`,
+		[tagId, iso(from), iso(to), widthS, isStepped],
 	);
 	return found.rows;
 }

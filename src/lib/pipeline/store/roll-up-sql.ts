@@ -2,14 +2,14 @@
 
 /** Readings further apart are not joined; with STANDS_MS in aggregate/roll-up.ts. */
 const STANDS = "interval '2 hours'";
-const STANDS_S = 7_200;
+export const STANDS_S = 7_200;
 
 /** Bounds of a stretch given twice, so that packed hours are read only where they are needed. */
 const within = (from: string, to: string) =>
 	`r.at >= ${from} AND r.at < ${to} AND r.hour >= date_trunc('hour', ${from}, 'UTC') AND r.hour < ${to}`;
 
 /** A tag's value stands until the next one where its source reports changes, or a deadband holds readings back; else a line joins them. */
-const STEPPED = `coalesce(s.kind <> 'modbus' OR t.row->>'deadband' IS NOT NULL OR t.quantity IS NOT DISTINCT FROM 'state' OR t.row->>'data_type' IS NOT DISTINCT FROM 'bool', true)`;
+export const STEPPED = `coalesce(s.kind <> 'modbus' OR t.row->>'deadband' IS NOT NULL OR t.quantity IS NOT DISTINCT FROM 'state' OR t.row->>'data_type' IS NOT DISTINCT FROM 'bool', true)`;
 
 /**
  * One row a tag and bucket with a reading in it, over stretches given as rows (tag_id, a, b) of `stretches`. A bucket that a bound cuts covers
