@@ -58,6 +58,8 @@ describe('what is packed', () => {
 				Number.MAX_VALUE,
 				-Number.MAX_VALUE,
 				2 ** 53 + 2,
+				// A million times this is no number any more.
+				-1.797693134862316e302,
 				null,
 			),
 			fc.integer({ min: -40_000, max: 40_000 }).map((n) => n * 0.1),

@@ -60,7 +60,7 @@ WITH sorted AS (
 		FROM (SELECT ms - g.first_ms - (place::integer - 1) * g.step_ms AS d FROM unnest(g.times) WITH ORDINALITY AS u (ms, place)) differences) t
 	CROSS JOIN LATERAL (SELECT g.low = g.high AND NOT g.has_gap AND NOT g.has_minus_zero AS is_constant,
 		CASE WHEN NOT g.has_gap AND NOT g.has_minus_zero AND NOT g.fits_real AND g.low < g.high
-			AND g.least > 1e-250 AND greatest(abs(g.low), abs(g.high)) < least(g.least * 1e6, 1e250)
+			AND g.least > 1e-250 AND greatest(abs(g.low), abs(g.high)) < least(CASE WHEN g.least < 1e250 THEN g.least * 1e6 ELSE 0 END, 1e250)
 			THEN power(2.0::float8, floor(ln(g.least) / ln(2.0::float8)) - 52) END AS step OFFSET 0) p
 	CROSS JOIN LATERAL (SELECT CASE WHEN p.step IS NOT NULL THEN CASE WHEN (g.high - g.low) / p.step < 9007199254740992
 			THEN g.low + round((g.high - g.low) / 2 / p.step) * p.step END END AS value_base OFFSET 0) b
