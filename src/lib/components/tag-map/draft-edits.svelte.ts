@@ -2,6 +2,7 @@
 import type { Finding, MapField, MapRow } from '#lib/domain/tag-map/row.ts';
 import { askApi, ApiRefusal } from '../live/call-api.ts';
 import type { CheckJson } from '../live/shapes.ts';
+import { mergeGone, mergeRemoval, mergeRow, type DraftConflict } from './merge-drafts.ts';
 
 /** A row in the grid: `key` stays while the row is on the page, whatever its id and name become. */
 export interface GridRow {
@@ -42,6 +43,8 @@ export class DraftEdits {
 	problem = $state<string | null>(null);
 	undoDepth = $state(0);
 	redoDepth = $state(0);
+	/** Cells that somebody else changed to another value meanwhile; theirs stand until the person says otherwise. */
+	conflicts = $state.raw<DraftConflict[]>([]);
 
 	readonly #site: string;
 	readonly #mayEdit: boolean;
@@ -52,6 +55,9 @@ export class DraftEdits {
 	#removed = new Map<string, MapRow>();
 	#timer: ReturnType<typeof setTimeout> | null = null;
 	#serial = 0;
+	#isSending = false;
+	/** Rows as the server last gave them, by id: what a merge starts from. */
+	#base = new Map<number, MapRow>();
 
 	constructor(site: string, mayEdit: boolean) {
 		this.#site = site;
@@ -87,6 +93,7 @@ export class DraftEdits {
 				this.revision = body.revision;
 				this.convert = body.convert;
 				this.#etag = etag;
+				this.#keepBase(body);
 				await this.recheck();
 			}
 			this.isLoaded = true;
@@ -94,6 +101,23 @@ export class DraftEdits {
 		} catch (error) {
 			this.problem = error instanceof Error ? error.message : String(error);
 		}
+	}
+
+	#keepBase(body: DraftAnswer): void {
+		this.#base = new Map(
+			body.rows.flatMap(({ row_version: _version, state: _state, ...row }) => (row.id == null ? [] : [[row.id, row]])),
+		);
+	}
+
+	/** Settles a conflict: yours is written over theirs as an edit like any other, or theirs is left. */
+	settle(conflict: DraftConflict, take: 'yours' | 'theirs'): void {
+		this.conflicts = this.conflicts.filter((one) => one !== conflict);
+		if (take === 'theirs') return;
+		const found = this.rows.find(({ row }) => row.id === conflict.id);
+		if (conflict.field !== null && found)
+			this.setCells([{ key: found.key, field: conflict.field, value: conflict.yours as MapRow[MapField] }]);
+		else if (conflict.yours === 'removed' && found) this.removeRows([found.key]);
+		else if (conflict.yours === 'changed' && !found) this.addRows(this.rows.length - 1, [conflict.row]);
 	}
 
 	async recheck(): Promise<void> {
@@ -193,7 +217,8 @@ export class DraftEdits {
 
 	/** Sends what changed since the last save. What was typed stays on the page whatever the answer is. */
 	async save(): Promise<void> {
-		if (this.saving === 'saving') {
+		// One at a time: a second one under the same ETag would conflict with ourselves.
+		if (this.#isSending) {
 			this.#saveSoon();
 			return;
 		}
@@ -205,6 +230,8 @@ export class DraftEdits {
 			return;
 		}
 		this.saving = 'saving';
+		this.#isSending = true;
+		let isStale = false;
 		try {
 			const rows = [...sent.map(({ row }) => row), ...removed.map(([, row]) => ({ id: row.id, tag: row.tag, delete: true }))];
 			const headers = this.#etag ? { 'if-match': this.#etag } : undefined;
@@ -221,27 +248,71 @@ export class DraftEdits {
 		} catch (error) {
 			this.saving = 'refused';
 			this.problem = error instanceof Error ? error.message : String(error);
-			if (error instanceof ApiRefusal && error.status === 412) await this.#takeOverFrom();
+			isStale = error instanceof ApiRefusal && error.status === 412;
+		} finally {
+			this.#isSending = false;
 		}
+		if (isStale) await this.#takeOver();
 	}
 
-	/** Somebody else changed the draft: their rows are read, and our own unsaved ones are laid over them. */
-	async #takeOverFrom(): Promise<void> {
-		const mine = this.rows.filter((row) => this.#dirty.has(row.key));
-		const { body, etag } = await askApi<DraftAnswer>(this.#site, '/map/draft');
-		this.#etag = etag;
-		const own = new Map(mine.filter((row) => row.row.id != null).map((row) => [row.row.id, row]));
-		const theirs = body.rows.map(
-			({ row_version: _version, state, ...row }) => own.get(row.id) ?? { key: `id-${row.id}`, row, state },
-		);
-		this.rows = [...theirs, ...mine.filter((row) => row.row.id == null)];
-		this.problem = 'Somebody else changed the draft meanwhile. Their rows were read, yours are kept; save again.';
+	/** Somebody else changed the draft: what only one of us changed is kept, cell by cell; what both changed is asked about. */
+	async #takeOver(): Promise<void> {
+		try {
+			const { body, etag } = await askApi<DraftAnswer>(this.#site, '/map/draft');
+			const theirs = new Map(body.rows.filter((row) => row.state !== 'removed').map((row) => [row.id, row]));
+			const conflicts: DraftConflict[] = [];
+			const keys = new Map(this.rows.flatMap(({ key, row }) => (row.id == null ? [] : [[row.id, key]])));
+			const mine = new Map(this.rows.filter(({ key }) => this.#dirty.has(key)).map((one) => [one.row.id, one]));
+			const away = new Map([...this.#removed.values()].map((row) => [row.id, row]));
+			const rows: GridRow[] = [];
+			for (const { row_version: _version, state, ...row } of theirs.values()) {
+				const key = keys.get(row.id ?? 0) ?? `id-${row.id}`;
+				const base = this.#base.get(row.id ?? 0);
+				const removed = away.get(row.id);
+				if (removed && base) {
+					const conflict = mergeRemoval(base, row);
+					if (!conflict) continue;
+					conflicts.push(conflict);
+					for (const [gone, one] of this.#removed) if (one.id === row.id) this.#removed.delete(gone);
+				}
+				const own = mine.get(row.id);
+				if (!own || !base) {
+					rows.push({ key, row, state });
+					continue;
+				}
+				const merged = mergeRow(base, own.row, row);
+				conflicts.push(...merged.conflicts);
+				rows.push({ key, row: merged.row, state: state === 'published' ? 'changed' : state });
+			}
+			for (const own of mine.values()) {
+				if (own.row.id == null) rows.push(own);
+				else if (!theirs.has(own.row.id)) {
+					conflicts.push(mergeGone(this.#base.get(own.row.id) ?? own.row, own.row));
+					this.#dirty.delete(own.key);
+				}
+			}
+			rows.push(...this.rows.filter(({ key, row }) => row.id == null && !this.#dirty.has(key)));
+			this.#etag = etag;
+			this.#keepBase(body);
+			this.rows = rows;
+			this.conflicts = [...this.conflicts, ...conflicts];
+			// Steps before this would bring back rows as they were before the other's changes.
+			this.#undo = [];
+			this.#redo = [];
+			this.undoDepth = 0;
+			this.redoDepth = 0;
+			this.problem = null;
+			this.#saveSoon();
+		} catch (error) {
+			this.problem = error instanceof Error ? error.message : String(error);
+		}
 	}
 
 	async #refresh(): Promise<void> {
 		const { body, etag } = await askApi<DraftAnswer>(this.#site, '/map/draft');
 		if (this.#dirty.size > 0 || this.#removed.size > 0) return;
 		this.#etag = etag;
+		this.#keepBase(body);
 		const byTag = new Map(this.rows.map((row) => [row.row.tag.toLowerCase(), row.key]));
 		const byId = new Map(this.rows.filter((row) => row.row.id != null).map((row) => [row.row.id, row.key]));
 		const order = new Map(this.rows.map((row, index) => [row.key, index]));
