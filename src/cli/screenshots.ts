@@ -18,13 +18,11 @@ interface Picture {
 }
 
 const DESK = { width: 1_366, height: 768 };
-const PHONE = { width: 390, height: 844 };
 const PICTURES: readonly Picture[] = [
 	{ name: 'overview', path: '/saltmere', scheme: 'light', ...DESK },
 	{ name: 'tag-map', path: '/saltmere/tag-map', scheme: 'light', ...DESK },
 	{ name: 'trace', path: '/saltmere/tags/HL-3.MDE.H.VEL', scheme: 'light', ...DESK },
-	{ name: 'sources', path: '/saltmere/sources', scheme: 'dark', ...DESK },
-	{ name: 'alarms-phone', path: '/saltmere/alarms', scheme: 'dark', ...PHONE },
+	{ name: 'machine', path: '/saltmere/machines/3', scheme: 'dark', ...DESK },
 ];
 
 const product = await startThrowawayProduct();
